@@ -25,7 +25,20 @@ _HOMES = {
     "read_plan": "twicetold.plan",
     "test_motif": "twicetold.evidence",
 }
-__all__ = ["__version__", *sorted(_HOMES)]  # noqa: PLE0604
+__all__ = [
+    "Catalogue",
+    "CatalogueError",
+    "ContactGraph",
+    "Plan",
+    "PlanError",
+    "TwicetoldError",
+    "__version__",
+    "contact_graph",
+    "rank_catalogue",
+    "read_catalogue",
+    "read_plan",
+    "test_motif",
+]
 
 if TYPE_CHECKING:
     from twicetold.catalogue import Catalogue, read_catalogue
