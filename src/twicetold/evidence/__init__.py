@@ -3,6 +3,6 @@
 Layer rule: the only place that sees both worlds; may import everything but ``report``.
 """
 
-from twicetold.evidence.results import Comparison, MotifEvidence, Ranking
+from twicetold.evidence.results import Comparison, MotifEvidence, Ranking, RouteShares
 
-__all__ = ["Comparison", "MotifEvidence", "Ranking"]
+__all__ = ["Comparison", "MotifEvidence", "Ranking", "RouteShares"]
