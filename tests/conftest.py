@@ -7,11 +7,19 @@ from pathlib import Path
 
 import numpy as np
 import pytest
+from hypothesis import HealthCheck, settings
 
 REPO = Path(__file__).resolve().parents[1]
 
+# Machines are noisy and compile on first use: time is no ground for failure, and CI tries the same
+# inputs every time (the marked fuzzing runs try new ones).
+settings.register_profile(
+    "steady", deadline=None, derandomize=True, suppress_health_check=[HealthCheck.too_slow]
+)
+settings.load_profile("steady")
 
-def pytest_runtest_makereport(item, call):  # noqa: ANN001, D103
+
+def pytest_runtest_makereport(item, call):
     # A browser test that skips would pass silently on a machine without a browser.
     if os.environ.get("TWICETOLD_NO_SKIP") and item.get_closest_marker("browser"):
         if call.excinfo is not None and call.excinfo.errisinstance(pytest.skip.Exception):
@@ -52,7 +60,7 @@ def small_graphs() -> dict[str, tuple[int, list[tuple[int, int]]]]:
     }
 
 
-def as_contact_graph(n, edges):  # noqa: ANN001
+def as_contact_graph(n, edges):
     """Make a ContactGraph without coordinates (lengths zero) for exact tests."""
     from twicetold.graph import ContactGraph
 

@@ -158,9 +158,7 @@ def rank(
     plan: PlanOpt = None,
     by: Annotated[
         str,
-        typer.Option(
-            "--by", help="evidence, moran_i, joins_ratio, emergence_share or holders."
-        ),
+        typer.Option("--by", help="evidence, moran_i, joins_ratio, emergence_share or holders."),
     ] = "evidence",
     graph: GraphOpt = None,
     propensity: PropensityOpt = None,

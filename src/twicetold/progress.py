@@ -41,7 +41,8 @@ def _progress(quiet: bool) -> Iterator[Progress]:
         yield no_progress
         return
     from rich.console import Console
-    from rich.progress import BarColumn, Progress as Bars, TextColumn, TimeRemainingColumn
+    from rich.progress import BarColumn, TextColumn, TimeRemainingColumn
+    from rich.progress import Progress as Bars
 
     bars = Bars(
         TextColumn("{task.description}"),

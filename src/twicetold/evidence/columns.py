@@ -52,7 +52,9 @@ COLUMNS: tuple[Column, ...] = (
         "Smallest p_against_emergence this motif could ever reach; above the level it is too rare "
         "to tell and leaves the multiplicity family.",
     ),
-    Column("p_against_emergence", "number", "P(at least as many joins) in the emergence-only world."),
+    Column(
+        "p_against_emergence", "number", "P(at least as many joins) in the emergence-only world."
+    ),
     Column("q_against_emergence", "number", "The same, adjusted across testable motifs."),
     Column(
         "p_against_ancestry",
