@@ -21,9 +21,10 @@ settings.load_profile("steady")
 
 def pytest_runtest_makereport(item, call):
     # A browser test that skips would pass silently on a machine without a browser.
-    if os.environ.get("TWICETOLD_NO_SKIP") and item.get_closest_marker("browser"):
-        if call.excinfo is not None and call.excinfo.errisinstance(pytest.skip.Exception):
-            pytest.fail(f"{item.nodeid} was skipped, and may not be", pytrace=False)
+    if not os.environ.get("TWICETOLD_NO_SKIP") or not item.get_closest_marker("browser"):
+        return
+    if call.excinfo is not None and call.excinfo.errisinstance(pytest.skip.Exception):
+        pytest.fail(f"{item.nodeid} was skipped, and may not be", pytrace=False)
 
 
 @pytest.fixture(scope="session")

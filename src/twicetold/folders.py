@@ -20,7 +20,7 @@ STALE_LOCK = 7 * 24 * 3600
 
 
 def write_text(path: Path, text: str, *, force: bool = False) -> None:
-    """Write a whole text file (UTF-8, \\n), or nothing.
+    """Write a whole text file (UTF-8, line feeds), or nothing.
 
     Raises
     ------

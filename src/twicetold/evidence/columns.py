@@ -53,7 +53,7 @@ COLUMNS: tuple[Column, ...] = (
         "to tell and leaves the multiplicity family.",
     ),
     Column(
-        "p_against_emergence", "number", "P(at least as many joins) in the emergence-only world."
+        "p_against_emergence", "number", "P(at least this many joins) in an emergence-only world."
     ),
     Column("q_against_emergence", "number", "The same, adjusted across testable motifs."),
     Column(
