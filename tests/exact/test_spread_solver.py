@@ -1,0 +1,213 @@
+"""The spread chain solved by linear algebra over all subsets of a small graph.
+
+The solver shares no code with the kernel: it writes down the generator of the chain on the
+non-empty subsets and solves for the expected time spent in each before extinction.
+"""
+
+from __future__ import annotations
+
+from collections import defaultdict
+from itertools import combinations
+
+import numpy as np
+import pytest
+
+PATH5 = [(0, 1), (1, 2), (2, 3), (3, 4)]
+
+
+class Solver:
+    """Expected time in each holder set from a uniform origin to extinction (N <= 8).
+
+    Rates with m holders: each holder loses at rate 1; a gain comes at rate x m (none at m = N).
+    """
+
+    def __init__(  # noqa: PLR0917
+        self, n, edges, x, shares=(0, 1, 0), family=None, propensity=None, reach=1.0
+    ):
+        self.n, self.edges, self.x = n, [tuple(e) for e in edges], x
+        self.shares, self.reach = shares, reach
+        self.family = list(range(n)) if family is None else list(family)
+        self.propensity = np.ones(n) if propensity is None else np.asarray(propensity, float)
+        self.near = [[] for _ in range(n)]
+        for i, j in self.edges:
+            self.near[i].append(j)
+            self.near[j].append(i)
+        sets = [frozenset(c) for k in range(1, n + 1) for c in combinations(range(n), k)]
+        where = {s: k for k, s in enumerate(sets)}
+        q = np.zeros((len(sets), len(sets)))
+        for s, row in where.items():
+            m = len(s)
+            for i in s:
+                if m > 1:
+                    q[row, where[s - {i}]] += 1.0
+            q[row, row] -= m
+            if m < n:
+                for v, p in self.gain(s).items():
+                    q[row, where[s | {v}]] += x * m * p
+                q[row, row] -= x * m
+        origin = np.zeros(len(sets))
+        for i in range(n):
+            origin[where[frozenset([i])]] = 1 / n
+        self.time = dict(zip(sets, np.linalg.solve(-q.T, origin), strict=True))
+
+    def gain(self, s):
+        """Law of the next gainer given the holders."""
+        e, c, i = self.shares
+        law = defaultdict(float)
+        out = [v for v in range(self.n) if v not in s]
+        # Only traditions without any propensity left: one of them, uniformly.
+        weights = self.propensity[out]
+        weights = weights if weights.sum() > 0 else np.ones(len(out))
+        emergence = dict(zip(out, weights / weights.sum(), strict=True))
+
+        def emerge(p):
+            for v, share in emergence.items():
+                law[v] += p * share
+
+        emerge(e)
+        boundary = [v for j in s for v in self.near[j] if v not in s]
+        if boundary:
+            for v in boundary:
+                for end, p in self.carried(v, s).items():
+                    law[end] += c / len(boundary) * p
+        else:
+            emerge(c)
+        for j in s:
+            kin = [v for v in out if self.family[v] == self.family[j]]
+            if kin:
+                for v in kin:
+                    law[v] += i / len(s) / len(kin)
+            else:
+                emerge(i / len(s))
+        assert abs(sum(law.values()) - 1) < 1e-12
+        return law
+
+    def carried(self, start, s):
+        """Where a contact that first lands on ``start`` ends: (place, last non-holder) solved."""
+        if self.reach == 1.0:
+            return {start: 1.0}
+        go = 1 - 1 / self.reach
+        states = [(p, last) for p in range(self.n) for last in range(self.n) if last not in s]
+        where = {k: r for r, k in enumerate(states)}
+        step = np.zeros((len(states), len(states)))
+        for (place, last), row in where.items():
+            for v in self.near[place]:
+                step[row, where[(v, last if v in s else v)]] += go / len(self.near[place])
+        begin = np.zeros(len(states))
+        begin[where[(start, start)]] = 1.0
+        stopped = (1 - go) * np.linalg.solve((np.eye(len(states)) - step).T, begin)
+        law = defaultdict(float)
+        for (_, last), row in where.items():
+            law[last] += stopped[row]
+        return law
+
+    def recorded(self, rate=None):
+        """Expected time in each *recorded* holder set (the empty one left out)."""
+        if rate is None:
+            return self.time
+        out = defaultdict(float)
+        for s, t in self.time.items():
+            members = sorted(s)
+            for k in range(1, len(members) + 1):
+                for part in combinations(members, k):
+                    p = np.prod([rate[i] if i in part else 1 - rate[i] for i in members])
+                    out[frozenset(part)] += t * p
+        return out
+
+    def prevalence(self, rate=None):
+        """P(n recorded), n = 1..N."""
+        out = np.zeros(self.n + 1)
+        for s, t in self.recorded(rate).items():
+            out[len(s)] += t
+        return out[1:] / out[1:].sum()
+
+    def law(self, statistic, count, rate=None):
+        """P(statistic = value | count recorded holders) as a dict."""
+        law = defaultdict(float)
+        for s, t in self.recorded(rate).items():
+            if len(s) == count:
+                law[self.summary(s)[statistic]] += t
+        total = sum(law.values())
+        return {k: v / total for k, v in sorted(law.items())}
+
+    def summary(self, s):
+        joins = [(i, j) for i, j in self.edges if i in s and j in s]
+        kin = [(i, j) for i, j in combinations(sorted(s), 2) if self.family[i] == self.family[j]]
+        clusters = pieces(s, joins)
+        return {
+            "joins": len(joins),
+            "joins_cross_family": sum(self.family[i] != self.family[j] for i, j in joins),
+            "clusters": len(clusters),
+            "largest_cluster": max(map(len, clusters)),
+            "strands": len(pieces(s, joins + kin)),
+        }
+
+
+def pieces(members, links):
+    """Connected components by repeated label spreading (nothing clever)."""
+    label = {i: i for i in members}
+    for _ in members:
+        for i, j in links:
+            label[i] = label[j] = min(label[i], label[j])
+    groups = defaultdict(set)
+    for i, lab in label.items():
+        groups[lab].add(i)
+    return list(groups.values())
+
+
+def log_series(x, n):
+    p = x ** np.arange(1, n + 1) / np.arange(1, n + 1)
+    return p / p.sum()
+
+
+# Values of the design's oracle table (exact: linear algebra over the 31 subsets of the path).
+@pytest.mark.parametrize(
+    ("x", "expected"),
+    [
+        (0.5, [0.726172, 0.181543, 0.060514, 0.022693, 0.009077]),
+        (0.9, [0.491770, 0.221297, 0.132778, 0.089625, 0.064530]),
+    ],
+)
+@pytest.mark.parametrize("shares", [(0, 1, 0), (0.2, 0.8, 0), (0.3, 0.3, 0.4)])
+def test_prevalence_is_log_series_for_every_share(x, expected, shares):
+    solver = Solver(5, PATH5, x, shares, family=[0, 0, 1, 1, 1])
+    np.testing.assert_allclose(solver.prevalence(), expected, atol=5e-7)
+    np.testing.assert_allclose(solver.prevalence(), log_series(x, 5), rtol=1e-10)
+
+
+@pytest.mark.parametrize(
+    ("share", "x", "two", "three"),
+    [
+        (0, 0.5, [0.140279, 0.859721], [0.014900, 0.232710, 0.752389]),
+        (0, 0.9, [0.220480, 0.779520], [0.029471, 0.337431, 0.633098]),
+        (0.2, 0.9, [0.297238, 0.702762], [0.039596, 0.409803, 0.550602]),
+    ],
+)
+def test_joins_on_the_path(share, x, two, three):
+    solver = Solver(5, PATH5, x, (share, 1 - share, 0))
+    np.testing.assert_allclose(list(solver.law("joins", 2).values()), two, atol=6e-7)
+    np.testing.assert_allclose(list(solver.law("joins", 3).values()), three, atol=6e-7)
+    assert list(solver.law("joins", 3)) == [0, 1, 2]
+
+
+def test_thinned_log_series_is_log_series():
+    # x' = x r / (1 - x (1 - r)) holds without a ceiling; with one, thin the truncated series.
+    x, r, n = 0.4, 0.6, 6
+    solver = Solver(n, [(i, i + 1) for i in range(n - 1)], x)
+    got = solver.prevalence([r] * n)
+    thinned = x * r / (1 - x * (1 - r))
+    np.testing.assert_allclose(got[:3], log_series(thinned, 200)[:3], rtol=0.02)
+
+
+def test_full_emergence_gives_uniform_subsets():
+    solver = Solver(6, [(i, (i + 1) % 6) for i in range(6)], 0.8, (1, 0, 0))
+    for s, t in solver.time.items():
+        same = [u for v, u in solver.time.items() if len(v) == len(s)]
+        np.testing.assert_allclose(t, np.mean(same), rtol=1e-9)
+
+
+def test_long_reach_on_the_complete_graph_is_still_uniform():
+    solver = Solver(4, [(i, j) for i in range(4) for j in range(i)], 0.7, reach=3.0)
+    law = solver.law("joins", 3)
+    assert list(law) == [3]
+    np.testing.assert_allclose(solver.prevalence(), log_series(0.7, 4), rtol=1e-10)
