@@ -1,0 +1,365 @@
+"""What the commands do: read, check, compute, write. The only place where files meet results."""
+
+from __future__ import annotations
+
+import hashlib
+import json
+import math
+import platform
+import time
+from collections.abc import Mapping
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+from twicetold import __version__
+from twicetold.folders import check_new_folder, new_folder, write_text
+from twicetold.plan import Plan
+
+if TYPE_CHECKING:
+    from twicetold.catalogue import Catalogue, CatalogueRules
+    from twicetold.evidence import MotifEvidence, Ranking
+    from twicetold.workers import Pool
+
+__all__ = [
+    "check_tables",
+    "power_run",
+    "rank_run",
+    "resolved_plan",
+    "supplement_run",
+    "test_one",
+    "verify_run",
+    "write_demonstration",
+    "write_text",
+]
+
+
+def write_demonstration(folder: Path) -> Path:
+    """Write the invented archipelago."""
+    from twicetold.example import write_example
+
+    with new_folder(folder) as part:
+        write_example(part)
+    return folder
+
+
+def rules_of(plan: Plan) -> CatalogueRules:
+    """Give the part of the plan that says how tables are read."""
+    from twicetold.catalogue import CatalogueRules
+
+    part = plan.catalogue
+    return CatalogueRules(
+        presence=part.presence,  # type: ignore[arg-type]
+        absent_rows=part.absent_rows,  # type: ignore[arg-type]
+        restricted=part.restricted,
+        without=part.without,
+        effort="" if part.effort == "effort" else part.effort,
+    )
+
+
+def check_tables(path: Path, plan: Plan) -> tuple[bool, list[str]]:
+    """Say whether a catalogue is ready, and every problem or remark."""
+    from twicetold.catalogue import check_catalogue
+
+    catalogue, problems = check_catalogue(path, rules_of(plan))
+    if catalogue is None:
+        noun = "problem" if len(problems) == 1 else "problems"
+        return False, [f"{len(problems)} {noun} in {path.name}:", *map(str, problems)]
+    lines = [f"Remark: {w}" for w in catalogue.warnings]
+    sets = len(catalogue.surveyed_sets)
+    families = len({f for f in catalogue.family if f})
+    left_out = len(catalogue.unlocated)
+    lines += [
+        f"{catalogue.title or path.name}: {catalogue.n_traditions:,} traditions, "
+        f"{catalogue.n_motifs:,} motifs, {catalogue.attested.nnz:,} attestations, "
+        f"{families:,} families, effort {'given' if catalogue.effort is not None else 'not given'}"
+        + (f", {sets:,} surveyed sets" if sets > 1 else "")
+        + (f"; {left_out:,} traditions without coordinates left out" if left_out else "")
+        + ".",
+    ]
+    if catalogue.notice:
+        lines.append(catalogue.notice)
+    return True, [*lines, "ready"]
+
+
+def resolved_plan(path: Path, plan: Plan) -> Plan:
+    """Give the plan with everything the catalogue decides written out."""
+    from twicetold.catalogue import read_catalogue
+    from twicetold.evidence.study import resolve
+
+    return resolve(read_catalogue(path, rules_of(plan)), plan)[0]
+
+
+def test_one(
+    path: Path,
+    motif: str,
+    plan: Plan,
+    *,
+    pool: Pool,
+    as_json: bool = False,
+    page: Path | None = None,
+    force: bool = False,
+    cache: bool = True,
+) -> str:
+    """Test one motif and say what came out, as text or as one JSON object."""
+    from twicetold.catalogue import read_catalogue
+    from twicetold.evidence import test_motif
+    from twicetold.evidence.words import tell
+
+    if page is not None:
+        check_new_folder(page, force=force)
+    catalogue = read_catalogue(path, rules_of(plan))
+    ranking = test_motif(catalogue, motif, plan, pool=pool, cache=cache)
+    evidence = ranking.evidence[0]
+    record = evidence_record(ranking, evidence)
+    if page is not None:
+        from twicetold.report import write_pages
+
+        command = f"twicetold test {path.name} {_quoted(evidence.motif_id)} --plan plan.toml"
+        with new_folder(page, force=force) as part:
+            write_text(part / "test.json", _json(record))
+            write_text(part / "plan.toml", ranking.plan.to_toml())
+            write_pages(ranking, part, command={"test": command})
+    return _json(record).rstrip("\n") if as_json else tell(ranking, evidence)
+
+
+def evidence_record(ranking: Ranking, evidence: MotifEvidence) -> dict[str, Any]:
+    """Give one motif's numbers as plain JSON values."""
+    return {
+        "twicetold": __version__,
+        "catalogue": ranking.catalogue.title,
+        "notice": ranking.catalogue.notice,
+        **{k: _plain(v) for k, v in evidence.row.items() if k != "rank"},
+        "worlds": [
+            {
+                "world": c.world,
+                "statistic": c.statistic,
+                "direction": c.direction,
+                "observed": _plain(c.observed),
+                "expected": _plain(c.expected),
+                "p": _plain(c.p),
+                "p_attainable": _plain(c.p_attainable),
+                "primary": c.primary,
+                "exact": bool(c.law is not None and c.law.exact),
+                "note": c.note,
+            }
+            for c in evidence.comparisons
+        ],
+        "hidden_bound_detail": {k: _plain(v) for k, v in evidence.hidden_bound.items()},
+        "fits": {k: _plain(v) for k, v in ranking.fits.items()},
+        "notes": list(ranking.notes),
+        "plan": ranking.plan.to_mapping(),
+    }
+
+
+def rank_run(
+    path: Path,
+    out: Path,
+    plan: Plan,
+    *,
+    pool: Pool,
+    by: str = "evidence",
+    without: tuple[str, ...] = (),
+    force: bool = False,
+    cache: bool = True,
+) -> str:
+    """Rank a catalogue and write its folder; give what to print."""
+    from twicetold.catalogue import read_catalogue
+    from twicetold.evidence import rank_catalogue
+    from twicetold.evidence.ranking import check_order
+
+    check_order(by)
+    check_new_folder(out, force=force)
+    clock = [time.perf_counter()]
+    catalogue = read_catalogue(path, rules_of(plan))
+    clock.append(time.perf_counter())
+    moved = None
+    if without:
+        from twicetold.evidence.withdrawal import rank_without
+
+        ranking, moved = rank_without(catalogue, plan, without, pool=pool, by=by, cache=cache)
+    else:
+        ranking = rank_catalogue(catalogue, plan, pool=pool, by=by, cache=cache)
+    clock.append(time.perf_counter())
+    with new_folder(out, force=force) as part:
+        _write_run(ranking, part, path=path, by=by, moved=moved)
+        clock.append(time.perf_counter())
+        seconds = [round(b - a, 3) for a, b in zip(clock, clock[1:], strict=False)]
+        timings = dict(zip(("read", "compute", "write"), seconds, strict=True))
+        write_text(part / "timings.json", _json({"seconds": timings}))
+    return _said(ranking, out, seconds, moved)
+
+
+def _write_run(ranking: Ranking, folder: Path, *, path: Path, by: str, moved: Any) -> None:
+    """Fill a run's folder: table, plan, record, the catalogue as used, tables, pages."""
+    from twicetold.catalogue import write_catalogue
+    from twicetold.report import write_pages
+
+    write_csv(ranking.motifs, folder / "motifs.csv")
+    write_text(folder / "plan.toml", ranking.plan.to_toml())
+    write_text(folder / "run.json", _json(run_record(ranking, by=by)))
+    write_catalogue(ranking.catalogue, folder / "catalogue")
+    tables = dict(ranking.tables)
+    for name in ("bands", "prevalence", "categories"):
+        frame = getattr(ranking, name)
+        if frame is not None:
+            tables[name] = frame
+    stability = [
+        e.stability.assign(motif_id=e.motif_id) for e in ranking.evidence if e.stability is not None
+    ]
+    if stability:
+        import pandas as pd
+
+        together = pd.concat(stability, ignore_index=True)
+        first = ["motif_id", *[c for c in together.columns if c != "motif_id"]]
+        tables["stability"] = together[first]
+    if moved is not None:
+        tables["moved"] = moved
+    if tables:
+        (folder / "tables").mkdir()
+    for name, frame in tables.items():
+        write_csv(frame, folder / "tables" / f"{name}.csv")
+    from twicetold.graph import write_edges
+
+    write_edges(ranking.graph, ranking.catalogue.tradition_ids, folder / "contacts.csv")
+    command = f"twicetold rank {_quoted(path.name)} --plan plan.toml --out RUN"
+    if by != "evidence":
+        command += f" --by {by}"
+    write_pages(ranking, folder, command={"rank": command, "catalogue": path.name})
+
+
+def run_record(ranking: Ranking, *, by: str) -> dict[str, Any]:
+    """Everything needed to make the run again: plan, seed, versions, inputs by SHA-256."""
+    catalogue = ranking.catalogue
+    return {
+        "twicetold": __version__,
+        "plan": ranking.plan.to_mapping(),
+        "plan_sha256": ranking.plan.digest(),
+        "by": by,
+        "seed": ranking.plan.evidence.seed,
+        "catalogue": {
+            "title": catalogue.title,
+            "notice": catalogue.notice,
+            "traditions": catalogue.n_traditions,
+            "motifs": catalogue.n_motifs,
+            "attestations": int(catalogue.attested.nnz),
+            "without_coordinates": len(catalogue.unlocated),
+            "withheld_traditions": catalogue.withheld_traditions,
+            "withheld_motifs": catalogue.withheld_motifs,
+            "inputs": [
+                {"name": s.name, "bytes": s.size, "sha256": s.sha256} for s in catalogue.sources
+            ],
+        },
+        "graph": _plain_mapping(ranking.fits.get("graph", {})),
+        "fits": {k: _plain(v) for k, v in ranking.fits.items() if k != "graph"},
+        "verdicts": {
+            str(k): int(v) for k, v in ranking.motifs["verdict"].value_counts().sort_index().items()
+        },
+        "notes": list(ranking.notes),
+        "versions": versions(),
+        "motifs_sha256": hashlib.sha256(csv_text(ranking.motifs).encode()).hexdigest(),
+    }
+
+
+def versions() -> dict[str, str]:
+    """Versions of Python and of the packages that make numbers."""
+    from importlib.metadata import version
+
+    names = ("numpy", "scipy", "pandas", "statsmodels", "libpysal", "esda", "numba", "scikit-learn")
+    return {"python": platform.python_version(), **{name: version(name) for name in names}}
+
+
+def _said(ranking: Ranking, out: Path, seconds: list[float], moved: Any) -> str:
+    """Say what a run found, in a few lines."""
+    from twicetold.evidence.verdict import VERDICTS
+
+    counts = ranking.motifs["verdict"].value_counts()
+    lines = []
+    if ranking.catalogue.notice:
+        lines.append(ranking.catalogue.notice)
+    lines.append(
+        f"{len(ranking.motifs):,} motifs over {ranking.catalogue.n_traditions:,} traditions, "
+        f"{seconds[1]:.1f} s to compute, {seconds[2]:.1f} s to write."
+    )
+    lines += [f"  {int(counts.get(v, 0)):>7,}  {v}" for v in VERDICTS]
+    lines += [f"Note: {note}" for note in ranking.notes]
+    if moved is not None:
+        changed = int((moved["verdict"] != moved["verdict_with"]).sum())
+        lines.append(f"Without the withdrawn traditions {changed:,} verdicts moved (tables/moved.csv).")
+    lines.append(f"Open {out / 'index.html'}")
+    return "\n".join(lines)
+
+
+def power_run(
+    path: Path, plan: Plan, *, out: Path | None, pool: Pool, force: bool, cache: bool
+) -> str:
+    """Say what the traditions could show; optionally write the table and its picture."""
+    from twicetold.catalogue import read_catalogue
+    from twicetold.evidence.power import catalogue_power
+    from twicetold.evidence.words import tell_power
+
+    if out is not None:
+        check_new_folder(out, force=force)
+    catalogue = read_catalogue(path, rules_of(plan))
+    table = catalogue_power(catalogue, plan, pool=pool, cache=cache)
+    if out is not None:
+        from twicetold.report import write_power
+
+        with new_folder(out, force=force) as part:
+            write_csv(table.frame, part / "power.csv")
+            write_power(table, part, notice=catalogue.notice)
+    return tell_power(table)
+
+
+def supplement_run(run: Path, out: Path, *, cldf: bool, force: bool) -> str:
+    """Write the deposit of a run."""
+    from twicetold.report.supplement import write_supplement
+
+    check_new_folder(out, force=force)
+    with new_folder(out, force=force) as part:
+        names = write_supplement(run, part, cldf=cldf)
+    return f"Wrote {len(names)} files to {out}. Next: twicetold verify {out}"
+
+
+def verify_run(deposit: Path, *, pool: Pool) -> tuple[bool, list[str]]:
+    """Compute a deposit's tables again; say whether they agree, and where they do not."""
+    from twicetold.verify import verify_deposit
+
+    return verify_deposit(deposit, pool=pool)
+
+
+def csv_text(frame: Any) -> str:
+    """Write a table as CSV text: full precision, blanks for what is not there, line feeds."""
+    text: str = frame.to_csv(index=False, lineterminator="\n", na_rep="", float_format="%.12g")
+    return text
+
+
+def write_csv(frame: Any, path: Path) -> None:
+    """Write a table as UTF-8 CSV."""
+    write_text(path, csv_text(frame))
+
+
+def _json(record: Mapping[str, Any]) -> str:
+    return json.dumps(record, ensure_ascii=False, indent=2, allow_nan=False) + "\n"
+
+
+def _plain_mapping(value: Any) -> dict[str, Any]:
+    return {str(k): _plain(v) for k, v in dict(value).items()}
+
+
+def _plain(value: Any) -> Any:
+    """Turn NumPy values and NaN into what JSON can hold."""
+    if isinstance(value, Mapping):
+        return _plain_mapping(value)
+    if isinstance(value, list | tuple):
+        return [_plain(v) for v in value]
+    if hasattr(value, "tolist"):
+        return _plain(value.tolist())
+    if isinstance(value, float):
+        return float(f"{value:.12g}") if math.isfinite(value) else None
+    return value
+
+
+def _quoted(words: str) -> str:
+    import shlex
+
+    return shlex.quote(words)
