@@ -82,7 +82,7 @@ def _given_edges(catalogue: Catalogue, rule: Rule) -> npt.NDArray[np.integer]:
             "`graph.rule` given needs the catalogue's contacts table, and there is none. "
             "Add a table `contacts` (tradition_id, neighbour_id), or take given:FILE or nearest:6."
         )
-    return catalogue.contacts
+    return np.asarray(catalogue.contacts)
 
 
 def build_graph(

@@ -43,7 +43,7 @@ def nearest_pairs(lat: FloatArray, lon: FloatArray, k: int) -> npt.NDArray[np.in
     rows, fetch = np.arange(n), k + 9
     while len(rows):
         fetch = min(fetch, len(targets))
-        settled, found = _ask(tree, targets, (lat, lon, xyz), rows, k, fetch)
+        settled, found = _ask(tree, targets, (lat, lon, xyz), rows, k=k, fetch=fetch)
         chosen[rows[settled]] = found[settled]
         rows, fetch = rows[~settled], 2 * fetch
     return np.stack([np.repeat(np.arange(n), k), chosen.ravel()], axis=1)
@@ -54,6 +54,7 @@ def _ask(
     targets: npt.NDArray[np.int64],
     points: tuple[FloatArray, FloatArray, FloatArray],
     rows: npt.NDArray[np.int64],
+    *,
     k: int,
     fetch: int,
 ) -> tuple[npt.NDArray[np.bool_], npt.NDArray[np.int64]]:
@@ -101,7 +102,7 @@ def within_pairs(lat: FloatArray, lon: FloatArray, km: float) -> IntArray:
     check_size((int(tree.count_neighbors(tree, reach)) - len(lat)) // 2, f"within:{km:g}")
     pairs = tree.query_pairs(reach, output_type="ndarray")
     i, j = pairs[:, 0], pairs[:, 1]
-    near = millimetres(great_circle_km(lat[i], lon[i], lat[j], lon[j])) <= int(round(km * 1e6))
+    near = millimetres(great_circle_km(lat[i], lon[i], lat[j], lon[j])) <= round(km * 1e6)
     return np.asarray(pairs[near], dtype=np.int32)
 
 

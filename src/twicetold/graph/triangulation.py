@@ -87,7 +87,8 @@ def gabriel(xyz: FloatArray, delaunay: Pairs) -> Pairs:
     middle = np.divide(middle, size, out=np.zeros_like(middle), where=size > 1e-12)
     radius = np.linalg.norm(middle - xyz[delaunay[:, 0]], axis=1)
     third, _ = cKDTree(xyz).query(middle, k=[3])
-    return delaunay[(third[:, 0] > radius * (1 + _RELATIVE) + _DUST) & (size[:, 0] > 1e-12)]
+    alone = (third[:, 0] > radius * (1 + _RELATIVE) + _DUST) & (size[:, 0] > 1e-12)
+    return np.asarray(delaunay[alone])
 
 
 def _stretch(xyz: FloatArray) -> tuple[FloatArray, float]:
@@ -142,11 +143,11 @@ def _on_a_circle(xyz: FloatArray, stretched: FloatArray, normal: FloatArray) -> 
 def _not_round_the_back(xyz: FloatArray, cycle: Pairs) -> npt.NDArray[np.bool_]:
     """Tell, for points in order along a great circle, which steps are under half a turn."""
     step = np.cross(xyz[cycle[:, 0]], xyz[cycle[:, 1]])
-    axis = step.sum(axis=0)
-    ahead = step @ axis
-    if np.abs(ahead).max() <= 1e-12:  # no step turns: cannot be, save for antipodes alone
-        return np.ones(len(cycle), dtype=bool)
-    return np.asarray(ahead > 0)
+    a, b, c = xyz[_widest_triangle(xyz)]
+    turn = step @ np.cross(b - a, c - a) / np.linalg.norm(np.cross(b - a, c - a))
+    # At most one step is half a turn or more, so the majority says which way round they go.
+    way = np.sign(np.count_nonzero(turn > 1e-12) - np.count_nonzero(turn < -1e-12))
+    return np.asarray(way * turn > 1e-12)
 
 
 def _widest_triangle(xyz: FloatArray) -> npt.NDArray[np.int64]:
@@ -172,7 +173,7 @@ def _hull(points: FloatArray) -> Pairs:
         except QhullError:
             continue
         if len(np.unique(faces)) == len(points) and len(faces) == 2 * len(points) - 4:
-            return faces
+            return np.asarray(faces)
     raise GraphError(
         "The traditions lie too close together, or too nearly on one circle, to be triangulated. "
         "Take `graph.rule` nearest:K instead, or give traditions at one place the same coordinates."
@@ -231,4 +232,4 @@ def _inner_faces(
 
 
 def _sorted_pairs(pairs: Pairs) -> Pairs:
-    return np.unique(np.sort(pairs, axis=1), axis=0).astype(np.int64)
+    return np.asarray(np.unique(np.sort(pairs, axis=1), axis=0), dtype=np.int64)
