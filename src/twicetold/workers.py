@@ -28,6 +28,8 @@ def no_progress(label: str, done: int, total: int) -> None:
 class Pool(Protocol):
     """Anything that can run numbered chunks and give their results back in order."""
 
+    progress: Progress
+
     def run(
         self,
         function: Callable[[Shared, Key], Out],
@@ -38,6 +40,13 @@ class Pool(Protocol):
     ) -> Iterator[Out]:
         """Yield ``function(shared, key)`` for each key, in the order of ``keys``."""
         ...
+
+
+def _processors() -> int:
+    """Give the number of processors this process may use."""
+    if hasattr(os, "sched_getaffinity"):
+        return len(os.sched_getaffinity(0))
+    return os.cpu_count() or 1
 
 
 class ThreadPool:

@@ -1,0 +1,131 @@
+"""What the pages show beside the verdict: clusters, correlogram, bands, prevalence, categories."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+import numpy.typing as npt
+import pandas as pd
+
+from twicetold.evidence.study import Group, Study
+from twicetold.statistics import (
+    DistanceClasses,
+    clusters,
+    correlogram,
+    distance_classes,
+    local_joins,
+)
+from twicetold.workers import Pool
+
+if TYPE_CHECKING:
+    from twicetold.evidence.ranking import Worlds
+    from twicetold.evidence.worlds import ObservedMotifs
+
+#: Number of distance classes of a correlogram.
+CLASSES = 10
+#: Half-width of the envelope in standard deviations (95 % under a normal approximation).
+ENVELOPE = 1.959964
+
+
+@dataclass(frozen=True)
+class Details:
+    """By motif index, and for the catalogue as a whole.
+
+    Parameters
+    ----------
+    parts : mapping of int to mapping
+        Keyword arguments of :class:`MotifEvidence` for each motif.
+    columns : mapping of str to mapping of int to object
+        Columns to add to the table, by motif index.
+    bands, prevalence, categories : pandas.DataFrame or None
+    tables : mapping of str to pandas.DataFrame
+    notes : tuple of str
+    """
+
+    parts: Mapping[int, Mapping[str, Any]] = field(default_factory=dict)
+    columns: Mapping[str, Mapping[int, Any]] = field(default_factory=dict)
+    bands: pd.DataFrame | None = None
+    prevalence: pd.DataFrame | None = None
+    categories: pd.DataFrame | None = None
+    tables: Mapping[str, pd.DataFrame] = field(default_factory=dict)
+    notes: tuple[str, ...] = ()
+
+    def of(self, motif: int, study: Study) -> Mapping[str, Any]:
+        """Give one motif's parts; just its holders where details were not asked for."""
+        if motif in self.parts:
+            return self.parts[motif]
+        empty = np.zeros(0, dtype=np.int32)
+        return {
+            "holders": study.catalogue.holders(motif),
+            "cluster_of": empty,
+            "local_joins": empty,
+        }
+
+
+def motif_details(
+    study: Study,
+    observed: ObservedMotifs,
+    worlds: Worlds,
+    table: pd.DataFrame,
+    pool: Pool,
+) -> Details:
+    """Compute everything the pages show."""
+    parts: dict[int, dict[str, Any]] = {}
+    for group in study.groups:
+        classes = group_classes(study, group)
+        for motif, held in zip(group.motifs, group.holders, strict=True):
+            parts[motif] = {
+                "holders": group.traditions[held],
+                "cluster_of": clusters(group.graph, held).label,
+                "local_joins": local_joins(group.graph, held),
+                "correlogram": correlogram_frame(study, group, held, classes),
+            }
+    return Details(parts=parts)
+
+
+def group_classes(study: Study, group: Group) -> DistanceClasses | None:
+    """Distance classes of a group: equal numbers of pairs in each, by a sample of traditions."""
+    if group.n < 4:
+        return None
+    lat = study.catalogue.latitude[group.traditions]
+    lon = study.catalogue.longitude[group.traditions]
+    return distance_classes(lat, lon, None, class_edges(lat, lon))
+
+
+def class_edges(lat: npt.NDArray[np.float64], lon: npt.NDArray[np.float64]) -> Any:
+    """Round kilometre edges that put about the same number of pairs in each class."""
+    from twicetold.graph import great_circle_km
+
+    # Every k-th tradition is enough to place the edges, and keeps the number of pairs small.
+    step = max(1, len(lat) // 400)
+    lat, lon = lat[::step], lon[::step]
+    first, second = np.triu_indices(len(lat), 1)
+    km = great_circle_km(lat[first], lon[first], lat[second], lon[second])
+    raw = np.quantile(km, np.linspace(0, 1, CLASSES + 1)[1:-1])
+    rounded = [float(f"{x:.2g}") for x in raw if x > 0]
+    return np.unique(np.array([0.0, *rounded, 20_038.0]))
+
+
+def correlogram_frame(
+    study: Study, group: Group, held: npt.NDArray[np.int32], classes: DistanceClasses | None
+) -> pd.DataFrame | None:
+    """Correlogram of one motif with its exact envelope under equal propensity."""
+    if classes is None or not 2 <= len(held) < group.n:
+        return None
+    lat = study.catalogue.latitude[group.traditions]
+    lon = study.catalogue.longitude[group.traditions]
+    found = correlogram(lat, lon, held, None, classes.edges_km, classes=classes)
+    return pd.DataFrame(
+        {
+            "from_km": classes.edges_km[:-1],
+            "to_km": classes.edges_km[1:],
+            "pairs": classes.pairs,
+            "observed": found.observed,
+            "expected": found.expected,
+            "low": np.maximum(found.expected - ENVELOPE * found.sd, 0.0),
+            "high": np.minimum(found.expected + ENVELOPE * found.sd, 1.0),
+        }
+    )

@@ -1,0 +1,83 @@
+"""Results in words, for the terminal."""
+
+from __future__ import annotations
+
+import math
+from typing import TYPE_CHECKING
+
+if TYPE_CHECKING:
+    from twicetold.evidence.results import MotifEvidence, Ranking
+
+STATISTIC_WORDS = {
+    "joins": "joins",
+    "joins_cross_family": "cross-family joins",
+    "joins_same_family": "same-family joins",
+    "moran_i": "Moran's I",
+    "clusters": "clusters",
+    "largest_cluster": "largest cluster",
+    "strands": "strands",
+}
+
+CAUTION = (
+    "One snapshot of records cannot tell contact from a shared environment nobody measured, nor "
+    "emergence from carriage that distance does not hinder. Association is not history."
+)
+
+
+def p_words(p: float) -> str:
+    """Write a p-value as people print it."""
+    if math.isnan(p):
+        return "-"
+    if p < 0.0001:
+        return f"{p:.1e}"
+    return f"{p:.4f}" if p < 0.1 else f"{p:.3f}"
+
+
+def number(value: float) -> str:
+    """Write a count or a mean with sensible digits."""
+    if isinstance(value, float) and math.isnan(value):
+        return "-"
+    if float(value).is_integer():
+        return f"{int(value):,}"
+    return f"{value:,.3f}" if abs(value) < 10 else f"{value:,.1f}"
+
+
+def tell(ranking: Ranking, evidence: MotifEvidence) -> str:
+    """Say what was found for one motif, in a page of plain text."""
+    row = evidence.row
+    lines = []
+    if ranking.catalogue.notice:
+        lines += [ranking.catalogue.notice, ""]
+    lines += [
+        f"{evidence.name} [{evidence.motif_id}]",
+        f"Held in {row['holders']:,} of {row['surveyed']:,} traditions searched: "
+        f"{row['joins']:,} joins, {row['clusters']:,} clusters "
+        f"(largest {row['largest_cluster']:,}), {row['strands']:,} strands.",
+        "",
+        f"Verdict: {row['verdict']} - {row['reason']}.",
+        "",
+        f"{'world':<14}{'statistic':<20}{'observed':>10}{'expected':>10}{'p':>10}",
+    ]
+    for c in evidence.comparisons:
+        mark = " *" if c.primary else ""
+        lines.append(
+            f"{c.world:<14}{STATISTIC_WORDS[c.statistic]:<20}{number(c.observed):>10}"
+            f"{number(c.expected):>10}{p_words(c.p):>10}{mark}"
+        )
+    lines += ["* decides in its world; the others are sensitivity.", ""]
+    shares = evidence.shares
+    if shares is not None:
+        if shares.refused:
+            lines.append(f"Route shares: none given; {shares.refused}")
+        else:
+            said = ", ".join(
+                f"{route} {100 * m:.0f} % ({100 * a:.0f} to {100 * b:.0f})"
+                for route, m, a, b in zip(
+                    shares.routes, shares.mean, shares.low, shares.high, strict=True
+                )
+            )
+            lines.append(f"Route shares, 90 % intervals: {said}.")
+        lines.append("")
+    lines += [f"Note: {note}" for note in ranking.notes]
+    lines.append(CAUTION)
+    return "\n".join(lines)
