@@ -1,0 +1,125 @@
+"""Streaming histograms: what is kept of the draws. Memory does not grow with their number."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+
+import numpy as np
+import numpy.typing as npt
+
+from twicetold.references import _kernels
+
+Ints = npt.NDArray[np.int64]
+
+
+@dataclass
+class Tally:
+    """Histograms of R integer quantities, each over just the span of values seen.
+
+    Parameters
+    ----------
+    low : (R,) int32
+        First value of each histogram.
+    start : (R + 1,) int64
+        Where each histogram begins in ``counts``.
+    counts : (any,) int64
+    """
+
+    low: npt.NDArray[np.int32]
+    start: Ints
+    counts: Ints
+
+    @classmethod
+    def empty(cls, rows: int) -> Tally:
+        """Give a tally that holds nothing yet."""
+        return cls(np.zeros(rows, np.int32), np.zeros(rows + 1, np.int64), np.zeros(0, np.int64))
+
+    def add(self, values: npt.NDArray[np.int32]) -> None:
+        """Count ``values`` (B, R) int32."""
+        if len(values) == 0 or values.shape[1] == 0:
+            return
+        low, high = values[0].copy(), values[0].copy()
+        _kernels.extents(values, low, high)
+        self._hold(low, high)
+        _kernels.tally(values, self.low, self.start, self.counts)
+
+    def merge(self, other: Tally) -> None:
+        """Add all counts of another tally of the same quantities."""
+        if len(other.counts) == 0:
+            return
+        self._hold(other.low, other._high())
+        _kernels.pour(other.low, other.start, other.counts, self.low, self.start, self.counts)
+
+    def row(self, r: int) -> tuple[Ints, Ints]:
+        """Values seen in histogram r, increasing, and how often."""
+        counts = self.counts[self.start[r] : self.start[r + 1]]
+        seen = np.flatnonzero(counts)
+        return (seen + int(self.low[r])).astype(np.int64), counts[seen]
+
+    def _high(self) -> npt.NDArray[np.int32]:
+        return (self.low + np.diff(self.start) - 1).astype(np.int32)
+
+    def _hold(self, low: npt.NDArray[np.int32], high: npt.NDArray[np.int32]) -> None:
+        """Widen the histograms to hold values from ``low`` to ``high``, with room to spare."""
+        if len(self.counts):
+            old_high = self._high()
+            if np.all(low >= self.low) and np.all(high <= old_high):
+                return
+            low, high = np.minimum(low, self.low), np.maximum(high, old_high)
+        room = (high - low) // 4 + 2
+        new_low = (low - np.where(low < self.low, room, 0)) if len(self.counts) else low - room
+        new_high = high + room
+        start = np.concatenate([[0], np.cumsum(new_high.astype(np.int64) - new_low + 1)])
+        counts = np.zeros(int(start[-1]), dtype=np.int64)
+        if len(self.counts):
+            _kernels.pour(self.low, self.start, self.counts, new_low, start, counts)
+        self.low, self.start, self.counts = new_low.astype(np.int32), start, counts
+
+
+@dataclass
+class ScoreTails:
+    """Tail counts of Moran scores at the observed values, and the sum of all scores.
+
+    Parameters
+    ----------
+    start : (K + 1,) int64
+        Where each count's thresholds begin.
+    thresholds : (T,) int64
+        Observed scores, increasing within each count.
+    hits : (T,) int64
+        Draws whose largest threshold reached is this one.
+    sums : (K,) int64
+        Sum of the scores of all draws.
+    """
+
+    start: Ints
+    thresholds: Ints
+    hits: Ints = field(init=False)
+    sums: Ints = field(init=False)
+
+    def __post_init__(self) -> None:
+        self.hits = np.zeros(len(self.thresholds), dtype=np.int64)
+        self.sums = np.zeros(len(self.start) - 1, dtype=np.int64)
+
+    def add(self, scores: Ints) -> None:
+        """Count ``scores`` (B, K) int64."""
+        _kernels.score_tails(scores, self.start, self.thresholds, self.hits, self.sums)
+
+    def merge(self, other: ScoreTails) -> None:
+        """Add the counts of another of the same thresholds."""
+        self.hits += other.hits
+        self.sums += other.sums
+
+    def at_least(self, c: int, threshold: int) -> int:
+        """Draws with a score of at least ``threshold``, which must be one of those observed.
+
+        Raises
+        ------
+        KeyError
+            When the threshold was not given before drawing.
+        """
+        known = self.thresholds[self.start[c] : self.start[c + 1]]
+        k = int(np.searchsorted(known, threshold))
+        if k == len(known) or known[k] != threshold:
+            raise KeyError(threshold)
+        return int(self.hits[self.start[c] + k : self.start[c + 1]].sum())
