@@ -134,11 +134,11 @@ def test(
     no_cache: NoCacheOpt = False,
 ) -> None:
     """Test one motif, by id or name."""
-    from twicetold.run import test_one
+    from twicetold.run import motif_run
 
     wanted = _plan(plan, graph, propensity, draws, walks, seed, worlds)
     with _pool(workers, cluster, quiet or as_json) as pool:
-        text = test_one(
+        text = motif_run(
             catalogue,
             motif,
             wanted,

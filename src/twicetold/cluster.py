@@ -54,9 +54,7 @@ class ClusterPool:
                 out = waiting.popleft().result()
                 done += 1
                 for key in coming:
-                    waiting.append(
-                        self.client.submit(function, common, key, pure=False, retries=3)
-                    )
+                    waiting.append(self.client.submit(function, common, key, pure=False, retries=3))
                     break
                 yield out
                 self.progress(label, done, total)

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import hashlib
+import itertools
 import json
 import math
 import platform
@@ -16,17 +17,19 @@ from twicetold.folders import check_new_folder, new_folder, write_text
 from twicetold.plan import Plan
 
 if TYPE_CHECKING:
-    from twicetold.catalogue import Catalogue, CatalogueRules
+    import pandas as pd
+
+    from twicetold.catalogue import CatalogueRules
     from twicetold.evidence import MotifEvidence, Ranking
     from twicetold.workers import Pool
 
 __all__ = [
     "check_tables",
+    "motif_run",
     "power_run",
     "rank_run",
     "resolved_plan",
     "supplement_run",
-    "test_one",
     "verify_run",
     "write_demonstration",
     "write_text",
@@ -89,7 +92,7 @@ def resolved_plan(path: Path, plan: Plan) -> Plan:
     return resolve(read_catalogue(path, rules_of(plan)), plan)[0]
 
 
-def test_one(
+def motif_run(
     path: Path,
     motif: str,
     plan: Plan,
@@ -183,7 +186,7 @@ def rank_run(
     with new_folder(out, force=force) as part:
         _write_run(ranking, part, path=path, by=by, moved=moved)
         clock.append(time.perf_counter())
-        seconds = [round(b - a, 3) for a, b in zip(clock, clock[1:], strict=False)]
+        seconds = [round(b - a, 3) for a, b in itertools.pairwise(clock)]
         timings = dict(zip(("read", "compute", "write"), seconds, strict=True))
         write_text(part / "timings.json", _json({"seconds": timings}))
     return _said(ranking, out, seconds, moved)
@@ -218,13 +221,26 @@ def _write_run(ranking: Ranking, folder: Path, *, path: Path, by: str, moved: An
         (folder / "tables").mkdir()
     for name, frame in tables.items():
         write_csv(frame, folder / "tables" / f"{name}.csv")
-    from twicetold.graph import write_edges
-
-    write_edges(ranking.graph, ranking.catalogue.tradition_ids, folder / "contacts.csv")
+    write_csv(contacts_frame(ranking), folder / "contacts.csv")
     command = f"twicetold rank {_quoted(path.name)} --plan plan.toml --out RUN"
     if by != "evidence":
         command += f" --by {by}"
     write_pages(ranking, folder, command={"rank": command, "catalogue": path.name})
+
+
+def contacts_frame(ranking: Ranking) -> pd.DataFrame:
+    """Give the contact graph as a table: one row an edge."""
+    import pandas as pd
+
+    graph, ids = ranking.graph, ranking.catalogue.tradition_ids
+    return pd.DataFrame(
+        {
+            "tradition_id": [ids[i] for i in graph.edges[:, 0]],
+            "neighbour_id": [ids[i] for i in graph.edges[:, 1]],
+            "length_km": graph.length_km.round(3),
+            "bridge": ["yes" if b else "no" for b in graph.bridge],
+        }
+    )
 
 
 def run_record(ranking: Ranking, *, by: str) -> dict[str, Any]:
@@ -284,7 +300,9 @@ def _said(ranking: Ranking, out: Path, seconds: list[float], moved: Any) -> str:
     lines += [f"Note: {note}" for note in ranking.notes]
     if moved is not None:
         changed = int((moved["verdict"] != moved["verdict_with"]).sum())
-        lines.append(f"Without the withdrawn traditions {changed:,} verdicts moved (tables/moved.csv).")
+        lines.append(
+            f"Without the withdrawn traditions {changed:,} verdicts moved (tables/moved.csv)."
+        )
     lines.append(f"Open {out / 'index.html'}")
     return "\n".join(lines)
 

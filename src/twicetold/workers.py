@@ -63,11 +63,7 @@ class ThreadPool:
     def __init__(self, workers: int | None = None, progress: Progress = no_progress) -> None:
         if workers is not None and workers < 1:
             raise ValueError(f"`workers` must be a whole number from 1 up, got {workers}.")
-        self.workers = (
-            workers or len(os.sched_getaffinity(0))
-            if hasattr(os, "sched_getaffinity")
-            else (workers or os.cpu_count() or 1)
-        )
+        self.workers = workers or _processors()
         self.progress = progress
 
     def run(

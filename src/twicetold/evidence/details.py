@@ -79,7 +79,7 @@ def motif_details(
         for motif, held in zip(group.motifs, group.holders, strict=True):
             parts[motif] = {
                 "holders": group.traditions[held],
-                "cluster_of": clusters(group.graph, held).label,
+                "cluster_of": clusters(group.graph, held).labels,
                 "local_joins": local_joins(group.graph, held),
                 "correlogram": correlogram_frame(study, group, held, classes),
             }

@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
-from typing import Any
+from typing import Any, Literal
 
 import numpy as np
 import pandas as pd
@@ -202,14 +202,16 @@ def judge(
         attainable = table[f"_attainable_{world}"].to_numpy(float)
         tested = testable(attainable, plan.evidence.alpha) & ~np.isnan(p)
         p_tested = np.where(tested, p, np.nan)
-        shown = "by" if plan.evidence.multiplicity == "by" else "bh"
+        shown: Literal["bh", "by"] = "by" if plan.evidence.multiplicity == "by" else "bh"
         q = np.full(len(p), np.nan) if alone else adjust(p_tested, shown)
         table[f"q_against_{world}"] = q
         table[f"_by_{world}"] = np.full(len(p), np.nan) if alone else adjust(p_tested, "by")
         deciding[world] = p_tested if method == "none" else q
     said = [
-        verdict(_grounds(study, worlds, row, {w: deciding[w][k] for w in FAMILIES}), plan.evidence.alpha)
-        for k, row in enumerate(table.to_dict("records"))
+        verdict(
+            _grounds(study, worlds, row, {w: deciding[w][k] for w in FAMILIES}), plan.evidence.alpha
+        )
+        for k, row in enumerate(_records(table))
     ]
     table["verdict"] = [v for v, _ in said]
     table["reason"] = [r for _, r in said]
@@ -233,7 +235,9 @@ def _row(
     row["joins_ratio"] = (
         row["joins"] / emergence.expected if emergence and emergence.expected > 0 else math.nan
     )
-    moran = next((c for c in comparisons if (c.world, c.statistic) == ("emergence", "moran_i")), None)
+    moran = next(
+        (c for c in comparisons if (c.world, c.statistic) == ("emergence", "moran_i")), None
+    )
     row["moran_i_expected"] = moran.expected if moran else math.nan
     for world in (*FAMILIES, "contact"):
         found = primary(comparisons, world)
@@ -249,7 +253,13 @@ def _row(
     return row
 
 
-def _grounds(study: Study, worlds: Worlds, row: Mapping[str, Any], by: Mapping[str, float]) -> Grounds:
+def _records(table: pd.DataFrame) -> list[dict[str, Any]]:
+    return [{str(k): v for k, v in row.items()} for row in table.to_dict("records")]
+
+
+def _grounds(
+    study: Study, worlds: Worlds, row: Mapping[str, Any], by: Mapping[str, float]
+) -> Grounds:
     power = worlds.power.get(int(row["holders"]), (math.nan, math.nan))
     return Grounds(
         emergence=float(by["emergence"]),
@@ -291,7 +301,7 @@ def ordered(table: pd.DataFrame, by: str) -> pd.DataFrame:
 def _assemble(study: Study, worlds: Worlds, table: pd.DataFrame, extra: Details) -> Ranking:
     shown = [c for c in columns.NAMES if c in table and _present(study, table, c)]
     public = table[shown]
-    records = public.to_dict("records")
+    records = _records(public)
     evidence = tuple(
         MotifEvidence(
             index=int(motif),
@@ -329,6 +339,6 @@ def _present(study: Study, table: pd.DataFrame, column: str) -> bool:
     if column in ("joins_expected", "joins_ratio", "moran_i_expected", "p_attainable"):
         return "emergence" in asked
     if "_share" in column:
-        route = column.split("_share")[0]
+        route = column.split("_share", maxsplit=1)[0]
         return "shares" in asked and (route != "inheritance" or study.families)
     return True

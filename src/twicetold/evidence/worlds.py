@@ -20,7 +20,7 @@ from twicetold.evidence.study import Group, Study
 from twicetold.references.ancestry import HolderSets, Lineages, ancestry_world
 from twicetold.references.emergence import EmergenceWorld, emergence_world
 from twicetold.references.law import Law
-from twicetold.references.pvalue import p_attainable, p_few, p_many, p_value
+from twicetold.references.pvalue import p_attainable, p_few, p_many
 from twicetold.statistics import STATISTICS, moran_from_score, observe
 from twicetold.workers import Pool, ThreadPool
 
@@ -214,9 +214,7 @@ def _comparisons(
                 primary=statistic == "joins",
             )
         )
-    tail = world.moran_tail(n, int(observed.scores[k]))
-    law = world.law("joins", n)
-    p = p_value(tail, law.total if law.exact else law.draws, exact=law.exact)
+    p = world.moran_p(n, int(observed.scores[k]))
     defined = not math.isnan(float(observed.moran[k]))
     expected = moran_from_score(group.graph, n, world.moran_mean(n)) if defined else math.nan
     out.append(
@@ -245,8 +243,8 @@ def compare(
         direction=direction,
         observed=observed,
         expected=law.mean(),
-        p=tail(law, observed),
-        p_attainable=p_attainable(law, direction),
+        p=float(tail(law, observed)),
+        p_attainable=p_attainable(law, direction, known=observed),  # type: ignore[arg-type]
         primary=primary,
         law=law,
     )
@@ -291,7 +289,7 @@ def against_ancestry(study: Study, observed: ObservedMotifs, pool: Pool) -> Worl
             plural = {"branch": "branches", "family": "families"}[what]
             said = f"{informative} {what if informative == 1 else plural} carry information"
             comparisons[motif] = (_with_note(made, said.replace("family carry", "family carries")),)
-    notes = ()
+    notes: tuple[str, ...] = ()
     if silent:
         notes = (
             f"For {silent:,} motifs the numbers held per {study.plan.ancestry.level} leave nothing "
