@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, field
 from enum import IntEnum
 from functools import cached_property
@@ -37,7 +37,7 @@ class SourceFile:
     sha256: str
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, eq=False)
 class Catalogue:
     """A checked catalogue of N located traditions and M motifs. All arrays are read-only.
 
@@ -79,6 +79,17 @@ class Catalogue:
         What was read, for the run record.
     warnings : tuple of Problem
         Worth knowing, not fatal.
+    invented : bool
+        Whether the catalogue says that its data are invented.
+    license, citation : str
+        As the catalogue gives them.
+    unlocated_holders : (M,) int32 or None
+        Attestations of each motif in traditions without coordinates, which take no part.
+    restricted_traditions, restricted_motifs : int
+        How many restricted rows were dropped because the plan does not let them in.
+
+    Traditions and motifs stand in order of their ids. Two catalogues hold the same when their
+    :meth:`digest` is the same; ``==`` compares identity.
     """
 
     title: str
@@ -109,6 +120,12 @@ class Catalogue:
     labels: Mapping[str, tuple[str, ...]] = field(default_factory=dict)
     sources: tuple[SourceFile, ...] = ()
     warnings: tuple[Problem, ...] = ()
+    invented: bool = False
+    license: str = ""
+    citation: str = ""
+    unlocated_holders: IntArray | None = None
+    restricted_traditions: int = 0
+    restricted_motifs: int = 0
 
     @property
     def n_traditions(self) -> int:
@@ -159,6 +176,48 @@ class Catalogue:
         out[self.not_applicable.indices[start:stop]] = CellState.NOT_APPLICABLE
         out[self.holders(motif)] = CellState.ATTESTED
         return out.astype(np.int8)
+
+    def digest(self) -> str:
+        """SHA-256 (hex) over the normalised content: what :func:`write_catalogue` would write.
+
+        It depends on no row that was dropped, nor on the order of rows or the kind of file read.
+        """
+        return self.content_record().sha256
+
+    def content_record(self) -> SourceFile:
+        """Size and SHA-256 of the normalised content, to stand in for the files read."""
+        from twicetold.catalogue.write import content_record
+
+        return content_record(self)
+
+    def subset(self, traditions: BoolArray) -> Catalogue:
+        """The catalogue restricted to some traditions, with indices counted anew.
+
+        Parameters
+        ----------
+        traditions : (N,) bool
+            True for those that stay. Motifs all stay, also those nobody holds any more.
+
+        Raises
+        ------
+        CatalogueError
+            When the mask has another length, or keeps fewer than two traditions.
+        """
+        from twicetold.catalogue.subset import subset
+
+        return subset(self, traditions)
+
+    def without(self, tradition_ids: Iterable[str]) -> Catalogue:
+        """The catalogue without the traditions of these ids.
+
+        Raises
+        ------
+        CatalogueError
+            When an id is unknown, or fewer than two traditions would stay.
+        """
+        from twicetold.catalogue.subset import without
+
+        return without(self, tradition_ids)
 
     def find_motif(self, words: str) -> int:
         """Index of the motif with this id, or else with this name (any case).

@@ -1,0 +1,338 @@
+"""Text tables as streams of rows that remember where they stand in the file."""
+
+from __future__ import annotations
+
+import codecs
+import csv
+import hashlib
+import io
+from collections.abc import Callable, Generator, Iterator
+from dataclasses import dataclass, field
+from itertools import islice
+from typing import BinaryIO
+
+import numpy as np
+
+from twicetold.catalogue import limits
+from twicetold.catalogue.model import IntArray, SourceFile
+from twicetold.catalogue.notes import Notes, shown
+
+_BLOCK = limits.MEBIBYTE
+Opener = Callable[[], BinaryIO]
+
+
+@dataclass(frozen=True)
+class Chunk:
+    """Some whole rows of a table: their row numbers and their cells, column by column."""
+
+    rows: IntArray
+    columns: list[tuple[str, ...]]
+
+
+@dataclass
+class Table:
+    """A table with its header, whose rows are read when asked for.
+
+    ``ragged`` gathers the cells of rows that do not fit the header: their ids are known to exist,
+    though nothing else of them can be trusted.
+    """
+
+    file: str
+    header: tuple[str, ...]
+    header_row: int
+    records: Callable[[], Iterator[list[str]]]
+    notes: Notes
+    lines: int = 0
+    nulls: dict[int, frozenset[str]] = field(default_factory=dict)
+    separators: dict[int, str] = field(default_factory=dict)
+    ragged: list[list[str]] = field(default_factory=list)
+
+    def chunks(self, size: int = limits.CHUNK_ROWS) -> Iterator[Chunk]:
+        """Rows that fit the header, in order; blank rows are passed over, ragged ones noted."""
+        width = len(self.header)
+        row = self.header_row + 1
+        source = self.records()
+        size = max(1, min(size, 8 * 1_000_000 // max(1, width)))
+        while block := list(islice(source, size)):
+            rows = np.arange(row, row + len(block), dtype=np.int32)
+            row += len(block)
+            if row > limits.TABLE_ROWS:
+                self.notes.error(
+                    "too many rows",
+                    f"has more than {limits.TABLE_ROWS:,} rows.",
+                    "Split the catalogue, or drop rows that are not needed.",
+                    file=self.file,
+                )
+                return
+            if set(map(len, block)) != {width} or not all(map(any, block)):
+                block, rows = self._fitting(block, rows, width)
+            if block:
+                yield Chunk(rows, list(zip(*block, strict=True)))
+
+    def _fitting(
+        self, block: list[list[str]], rows: IntArray, width: int
+    ) -> tuple[list[list[str]], IntArray]:
+        kept: list[list[str]] = []
+        numbers: list[int] = []
+        for record, number in zip(block, rows.tolist(), strict=True):
+            if not any(cell.strip() for cell in record):
+                continue
+            if len(record) > width and not any(record[width:]):
+                record = record[:width]  # noqa: PLW2901 - trailing blanks carry nothing
+            if len(record) != width:
+                self.ragged.append([cell[: limits.ID_CHARS] for cell in record[:width]])
+                self.notes.error(
+                    "ragged row",
+                    f"has {len(record)} cells where the header has {width}.",
+                    "Give the row one cell per column; put quotes around cells that hold the "
+                    "separator.",
+                    file=self.file,
+                    row=number,
+                )
+                continue
+            kept.append(record)
+            numbers.append(number)
+        return kept, np.asarray(numbers, dtype=np.int32)
+
+
+@dataclass(frozen=True)
+class Dialect:
+    """How a text table is written; a delimiter of "" is guessed from the header."""
+
+    delimiter: str = ""
+    quote: str = '"'
+    double_quote: bool = True
+    encoding: str = "utf-8"
+    comment: str = ""
+    skip_rows: int = 0
+    header_rows: int = 1
+    skip_space: bool = False
+
+
+def open_table(
+    opener: Opener,
+    file: str,
+    notes: Notes,
+    *,
+    dialect: Dialect | None = None,
+    names: tuple[str, ...] = (),
+    sources: list[SourceFile] | None = None,
+) -> Table | None:
+    """Scan a text table once (bytes, encoding, hash), read its header, and hand back its stream.
+
+    Returns None, with the reason noted, when the table cannot be read at all.
+    """
+    dialect = dialect or Dialect()
+    lines = _scan(opener, file, notes, dialect.encoding, sources)
+    if lines is None:
+        return None
+    if not dialect.delimiter:
+        dialect = _guess(opener, file, dialect)
+    stream = _records(opener, file, notes, dialect)
+    header: tuple[str, ...] = names
+    row = 0
+    if dialect.header_rows:
+        for record in stream:
+            row += 1
+            if any(cell.strip() for cell in record):
+                header = tuple(cell.strip() for cell in record)
+                break
+        else:
+            if not notes.broken:
+                _say_empty(file, notes)
+            return None
+        row += dialect.header_rows - 1
+    stream.close()
+    if not check_header(header, file, row, notes):
+        return None
+
+    def records() -> Iterator[list[str]]:
+        inner = _records(opener, file, notes, dialect)
+        return islice(inner, row, None)
+
+    return Table(file, header, row, records, notes, lines)
+
+
+def check_header(header: tuple[str, ...], file: str, row: int, notes: Notes) -> bool:
+    """Whether the column names can be told apart; says so when not."""
+    if len(header) > limits.TABLE_COLUMNS:
+        notes.error(
+            "too many columns",
+            f"has {len(header):,} columns, more than {limits.TABLE_COLUMNS:,}.",
+            "Give long tables as one row per motif and tradition.",
+            file=file,
+            row=row,
+        )
+        return False
+    seen: dict[str, str] = {}
+    good = True
+    for name in header:
+        key = name.casefold()
+        if key and key in seen:
+            notes.error(
+                "repeated column",
+                f"two columns are called {shown(name)}.",
+                "Rename or remove one of them.",
+                file=file,
+                row=row,
+                column=name[:60],
+            )
+            good = False
+        seen[key] = name
+    return good
+
+
+def _say_empty(file: str, notes: Notes) -> None:
+    notes.error(
+        "empty table",
+        "is empty.",
+        "Put the column names in the first row and the data below.",
+        file=file,
+    )
+
+
+def _scan(
+    opener: Opener, file: str, notes: Notes, encoding: str, sources: list[SourceFile] | None
+) -> int | None:
+    """Read every byte once: hash, size, encoding, NUL bytes, line length. Returns the lines."""
+    digest = hashlib.sha256()
+    decoder = codecs.getincrementaldecoder(encoding)()
+    size = lines = since_break = 0
+    with opener() as handle:
+        while True:
+            block = handle.read(_BLOCK)
+            if size == 0 and block[:2] in (b"\xff\xfe", b"\xfe\xff") and encoding == "utf-8":
+                _say_encoding(file, notes, row=1, offset=0, byte=block[0], guess="UTF-16")
+                return None
+            pending = decoder.getstate()[0]
+            try:
+                decoder.decode(block, final=not block)
+            except UnicodeDecodeError as exc:
+                whole = pending + block
+                row = lines + 1 + whole.count(b"\n", 0, exc.start)
+                guess = "Windows-1252 (Western European)"
+                _say_encoding(
+                    file,
+                    notes,
+                    row=row,
+                    offset=size - len(pending) + exc.start,
+                    byte=whole[exc.start],
+                    guess=guess,
+                )
+                return None
+            if not block:
+                break
+            if encoding == "utf-8" and (nul := block.find(b"\x00")) >= 0:
+                notes.error(
+                    "NUL byte",
+                    f"holds a NUL byte (byte {size + nul + 1:,}), which no text table has.",
+                    "Save the table again as CSV UTF-8; the file may be damaged or not a table.",
+                    file=file,
+                    row=lines + 1 + block.count(b"\n", 0, nul),
+                )
+                return None
+            digest.update(block)
+            size += len(block)
+            lines += block.count(b"\n")
+            last = max(block.rfind(b"\n"), block.rfind(b"\r"))
+            since_break = since_break + len(block) if last < 0 else len(block) - last - 1
+            if size > limits.TABLE_BYTES or since_break > limits.LINE_BYTES:
+                _say_too_large(file, notes, size > limits.TABLE_BYTES, lines + 1)
+                return None
+    if sources is not None:
+        sources.append(SourceFile(file, size, digest.hexdigest()))
+    if size == 0:
+        _say_empty(file, notes)
+        return None
+    return lines
+
+
+def _say_encoding(file: str, notes: Notes, *, row: int, offset: int, byte: int, guess: str) -> None:
+    notes.error(
+        "not UTF-8",
+        f"is not UTF-8: byte {offset + 1:,} of the file is 0x{byte:02X} (probably {guess}).",
+        "Save it as 'CSV UTF-8' in the spreadsheet, or convert its encoding to UTF-8.",
+        file=file,
+        row=row,
+    )
+
+
+def _say_too_large(file: str, notes: Notes, whole: bool, row: int) -> None:
+    if whole:
+        notes.error(
+            "too large",
+            f"is larger than {limits.TABLE_BYTES // limits.MEBIBYTE:,} MiB.",
+            "Drop columns that are not needed, or split the catalogue.",
+            file=file,
+        )
+        return
+    notes.error(
+        "line too long",
+        f"has a line longer than {limits.LINE_BYTES // limits.MEBIBYTE} MiB.",
+        "Check that the file is a table with one row a line.",
+        file=file,
+        row=row,
+    )
+
+
+def _guess(opener: Opener, file: str, dialect: Dialect) -> Dialect:
+    with opener() as handle:
+        first = handle.read(_BLOCK).lstrip(b"\xef\xbb\xbf\r\n").split(b"\n", 1)[0]
+    delimiter = "\t" if file.lower().removesuffix(".zip").endswith((".tsv", ".tab")) else ","
+    if delimiter.encode() not in first:
+        for other in ("\t", ";", ","):
+            if other.encode() in first:
+                delimiter = other
+                break
+    return Dialect(delimiter=delimiter, encoding=dialect.encoding)
+
+
+def _records(
+    opener: Opener, file: str, notes: Notes, dialect: Dialect
+) -> Generator[list[str], None, None]:
+    """Every row of the file, blank ones as empty lists, so that counting gives row numbers."""
+    encoding = "utf-8-sig" if dialect.encoding == "utf-8" else dialect.encoding
+    count = 0
+    with opener() as binary, io.TextIOWrapper(binary, encoding=encoding, newline="") as text:
+        for _ in range(dialect.skip_rows):
+            text.readline()
+        reader = csv.reader(
+            text,
+            delimiter=dialect.delimiter,
+            quotechar=dialect.quote or None,
+            quoting=csv.QUOTE_MINIMAL if dialect.quote else csv.QUOTE_NONE,
+            doublequote=dialect.double_quote,
+            escapechar=None if dialect.double_quote or not dialect.quote else "\\",
+            skipinitialspace=dialect.skip_space,
+            strict=True,
+        )
+        try:
+            for record in reader:
+                count += 1
+                if dialect.comment and record and record[0].startswith(dialect.comment):
+                    yield []
+                    continue
+                yield record
+        except csv.Error as exc:
+            _say_broken(file, notes, count + 1, str(exc))
+        except UnicodeDecodeError:
+            _say_broken(file, notes, count + 1, "encoding")
+
+
+def _say_broken(file: str, notes: Notes, row: int, reason: str) -> None:
+    if "field larger" in reason:
+        notes.error(
+            "cell too long",
+            "has a cell too long for a table, or a quotation mark that is never closed.",
+            "Look for a lone quotation mark in this row, or shorten the cell.",
+            file=file,
+            row=row,
+        )
+        return
+    notes.error(
+        "broken quotes",
+        "has a quotation mark that does not close before the next separator.",
+        'Double the quotation marks inside quoted cells ("") or take them out.',
+        file=file,
+        row=row,
+    )
