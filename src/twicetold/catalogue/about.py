@@ -11,7 +11,7 @@ from twicetold.catalogue import limits
 from twicetold.catalogue.cells import clean_text
 from twicetold.catalogue.cldf import read_json
 from twicetold.catalogue.model import SourceFile
-from twicetold.catalogue.notes import Notes, shown, suggestion
+from twicetold.catalogue.notes import Notes, Spot, shown, suggestion
 from twicetold.catalogue.tables import Table
 
 INVENTED_NOTICE = "Invented data: these traditions, motifs and records describe no real people."
@@ -48,37 +48,28 @@ class About:
         """Set one key, or say why not."""
         known = [f.name for f in fields(self)]
         if key not in known:
-            notes.warn(
+            Spot(notes, file, row=row).warn(
                 "unknown key",
                 f"has the key {shown(key)}, which means nothing here.",
                 f"Use {', '.join(known)}.{suggestion(key, known)}",
-                file=file,
-                row=row,
             )
             return
         if key == "invented":
             truth = {"true": True, "1": True, "yes": True, "false": False, "0": False, "no": False}
             word = str(value).strip().casefold()
             if word not in truth:
-                _say_value(key, value, "true or false", notes, file, row)
+                _say_value(Spot(notes, file, row, key), value, "true or false")
                 return
             self.invented = truth[word]
             return
         if not isinstance(value, str):
-            _say_value(key, value, "text in quotes", notes, file, row)
+            _say_value(Spot(notes, file, row, key), value, "text in quotes")
             return
-        setattr(self, key, clean_text(value, notes, file=file, row=row, column=key))
+        setattr(self, key, clean_text(value, Spot(notes, file, row=row, column=key)))
 
 
-def _say_value(key: str, value: object, wanted: str, notes: Notes, file: str, row: int) -> None:
-    notes.error(
-        "bad value",
-        f"`{key}` must be {wanted}, got {shown(str(value))}.",
-        "Correct it.",
-        file=file,
-        row=row,
-        column=key,
-    )
+def _say_value(spot: Spot, value: object, wanted: str) -> None:
+    spot.error("bad value", f"must be {wanted}, got {shown(str(value)[:200])}.", "Correct it.")
 
 
 def read_about_file(folder: Path, about: About, notes: Notes, sources: list[SourceFile]) -> None:
@@ -87,11 +78,10 @@ def read_about_file(folder: Path, about: About, notes: Notes, sources: list[Sour
     if not path.exists():
         return
     if not path.is_file() or path.stat().st_size > limits.ABOUT_BYTES:
-        notes.error(
+        Spot(notes, path.name).error(
             "bad about.toml",
             "is not a small ordinary file.",
             "Keep to a few lines: title, notice, invented, license, citation.",
-            file=path.name,
         )
         return
     raw = path.read_bytes()
@@ -101,11 +91,10 @@ def read_about_file(folder: Path, about: About, notes: Notes, sources: list[Sour
         reason = (
             f" ({exc})" if isinstance(exc, tomllib.TOMLDecodeError) and len(str(exc)) < 200 else ""
         )
-        notes.error(
+        Spot(notes, path.name).error(
             "broken TOML",
             f"is no valid TOML in UTF-8{reason}.",
             'Write lines such as title = "My catalogue".',
-            file=path.name,
         )
         return
     sources.append(SourceFile(path.name, len(raw), hashlib.sha256(raw).hexdigest()))
@@ -132,17 +121,16 @@ def read_land(folder: Path, notes: Notes, sources: list[SourceFile]) -> Path | N
     if not path.exists():
         return None
     if not path.is_file():
-        notes.error("bad land", "is not an ordinary file.", "Remove it.", file=path.name)
+        Spot(notes, path.name).error("bad land", "is not an ordinary file.", "Remove it.")
         return None
     found = read_json(path, limits.LAND_BYTES, notes, sources)
     if found is None:
         return None
     if found.get("type") not in _GEOJSON:
-        notes.error(
+        Spot(notes, path.name).error(
             "bad land",
             "is no GeoJSON outline.",
             "Give a FeatureCollection of polygons with longitude and latitude.",
-            file=path.name,
         )
         return None
     return path.resolve()

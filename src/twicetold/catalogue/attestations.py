@@ -14,7 +14,7 @@ from twicetold.catalogue.cells import clean_id, warn_formula
 from twicetold.catalogue.columns import Columns
 from twicetold.catalogue.model import CellState, IntArray
 from twicetold.catalogue.motifs import MotifRows
-from twicetold.catalogue.notes import Notes, shown, suggestion
+from twicetold.catalogue.notes import Spot, near, shown, suggestion
 from twicetold.catalogue.tables import Chunk, Table
 from twicetold.catalogue.traditions import HIDDEN, TraditionRows
 
@@ -62,7 +62,6 @@ def read_pairs(
     columns: Columns,
     traditions: TraditionRows,
     motifs: MotifRows,
-    notes: Notes,
     *,
     interpret: Interpreter | None = None,
     star: bool = False,
@@ -78,12 +77,13 @@ def read_pairs(
     for chunk in table.chunks():
         motif = _codes(chunk, columns["motif"], motifs.index)
         tradition = _codes(chunk, columns["tradition"], traditions.index)
-        if (motif == UNKNOWN).any():
-            _resolve_motifs(table, chunk, columns["motif"], motif, tradition, motifs, notes)
-        if (tradition == UNKNOWN).any():
-            _resolve_traditions(
-                table, chunk, columns["tradition"], tradition, motif, traditions, notes
-            )
+        if (motif == UNKNOWN).any() or (tradition == UNKNOWN).any():
+            _mark_hidden(chunk, columns["motif"], motif, motifs.index)
+            _mark_hidden(chunk, columns["tradition"], tradition, traditions.index)
+            motif[(motif == UNKNOWN) & (tradition == HIDDEN)] = HIDDEN
+            tradition[(tradition == UNKNOWN) & (motif == HIDDEN)] = HIDDEN
+            _resolve(table, chunk, columns["motif"], motif, motifs)
+            _resolve(table, chunk, columns["tradition"], tradition, traditions)
         good = np.flatnonzero((motif >= 0) & (tradition >= 0))
         states = (
             np.full(len(good), CellState.ATTESTED, dtype=np.int8)
@@ -104,98 +104,54 @@ def _codes(chunk: Chunk, at: int, index: dict[str, int]) -> IntArray:
     return np.fromiter(map(index.get, cells, repeat(UNKNOWN)), dtype=np.int32, count=len(cells))
 
 
-def _resolve_motifs(
-    table: Table,
-    chunk: Chunk,
-    at: int,
-    codes: IntArray,
-    traditions: IntArray,
-    motifs: MotifRows,
-    notes: Notes,
+def _mark_hidden(chunk: Chunk, at: int, codes: IntArray, index: dict[str, int]) -> None:
+    """Recognise hidden ids that have blanks around them, before anything is said of the row."""
+    cells = chunk.columns[at]
+    for k in np.flatnonzero(codes == UNKNOWN).tolist():
+        if index.get(cells[k].strip()) == HIDDEN:
+            codes[k] = HIDDEN
+
+
+def _resolve(
+    table: Table, chunk: Chunk, at: int, codes: IntArray, roster: TraditionRows | MotifRows
 ) -> None:
     """Second look at ids not found at once: padded, new (without a motifs table), or unknown."""
-    column = table.header[at]
+    grows = isinstance(roster, MotifRows) and not roster.closed
     cells = chunk.columns[at]
     for k in np.flatnonzero(codes == UNKNOWN).tolist():
-        row = int(chunk.rows[k])
-        raw = cells[k]
-        known = motifs.index.get(raw.strip(), UNKNOWN)
-        if known == HIDDEN or traditions[k] == HIDDEN:
-            codes[k] = HIDDEN
+        raw, spot = cells[k], table.spot(int(chunk.rows[k]), at)
+        if raw in roster.index:  # added a few rows above
+            codes[k] = roster.index[raw]
             continue
-        if raw in motifs.index:  # added a few rows above
-            codes[k] = known
+        identity = clean_id(raw, spot)
+        codes[k] = roster.index.get(identity, UNKNOWN) if identity else HIDDEN
+        if codes[k] != UNKNOWN:
             continue
-        identity = clean_id(raw, notes, file=table.file, row=row, column=column)
-        if not identity:
-            codes[k] = HIDDEN
-        elif known >= 0:
-            codes[k] = known
-        elif not motifs.closed and identity != EVERY_MOTIF:
-            warn_formula(identity, notes, file=table.file, row=row, column=column)
-            codes[k] = motifs.add(identity, row=row)
+        if grows and identity != EVERY_MOTIF and isinstance(roster, MotifRows):
+            warn_formula(identity, spot)
+            codes[k] = roster.add(identity, row=spot.row)
         else:
             codes[k] = HIDDEN
-            _say_unknown(
-                "motif", identity, motifs.public_ids, motifs.file, table, column, row, notes
-            )
+            say_unknown(spot, identity, roster)
 
 
-def _resolve_traditions(
-    table: Table,
-    chunk: Chunk,
-    at: int,
-    codes: IntArray,
-    motifs: IntArray,
-    traditions: TraditionRows,
-    notes: Notes,
-) -> None:
-    column = table.header[at]
-    cells = chunk.columns[at]
-    for k in np.flatnonzero(codes == UNKNOWN).tolist():
-        row = int(chunk.rows[k])
-        known = traditions.index.get(cells[k].strip(), UNKNOWN)
-        if known == HIDDEN or motifs[k] == HIDDEN:
-            codes[k] = HIDDEN
-            continue
-        identity = clean_id(cells[k], notes, file=table.file, row=row, column=column)
-        codes[k] = known if identity and known >= 0 else HIDDEN
-        if identity and known == UNKNOWN:
-            _say_unknown(
-                "tradition",
-                identity,
-                traditions.public_ids,
-                traditions.file,
-                table,
-                column,
-                row,
-                notes,
-            )
-
-
-def _say_unknown(
-    kind: str,
-    identity: str,
-    known: list[str],
-    home: str,
-    table: Table,
-    column: str,
-    row: int,
-    notes: Notes,
-) -> None:
-    home = home or "the catalogue"
-    hint = "" if notes.full(f"unknown {kind}", table.file, column) else suggestion(identity, known)
-    notes.error(
-        f"unknown {kind}",
-        f"the {kind} {shown(identity)} is not in {home}.",
-        f"Add it there or correct the id.{hint}",
-        file=table.file,
-        row=row,
-        column=column,
+def say_unknown(spot: Spot, identity: str, roster: TraditionRows | MotifRows) -> None:
+    """Note an id that the roster does not have; one like a hidden id is not repeated."""
+    noun = "motif" if isinstance(roster, MotifRows) else "tradition"
+    kind, home = f"unknown {noun}", roster.file or "the catalogue"
+    name, hint = shown(identity), ""
+    if not spot.notes.full(kind, spot.file, spot.column):
+        hidden = [i for i, code in roster.index.items() if code == HIDDEN]
+        if near(identity, hidden):
+            name = "named here"
+        else:
+            hint = suggestion(identity, roster.public_ids)
+    spot.error(
+        kind, f"the {noun} {name} is not in {home}.", f"Add it there or correct the id.{hint}"
     )
 
 
-def state_column(table: Table, at: int, notes: Notes) -> Interpreter:
+def state_column(table: Table, at: int) -> Interpreter:
     """Interpreter of an optional ``state`` column."""
 
     def interpret(chunk: Chunk, good: npt.NDArray[np.intp]) -> StateArray:
@@ -205,13 +161,10 @@ def state_column(table: Table, at: int, notes: Notes) -> Interpreter:
             word = " ".join(cells[place].replace("_", " ").replace("-", " ").casefold().split())
             state = STATE_WORDS.get(word)
             if state is None:
-                notes.error(
+                table.spot(int(chunk.rows[place]), at).error(
                     "unknown state",
                     f"{shown(cells[place])} is no state of a cell.",
                     "Write attested, absent, not searched or not applicable.",
-                    file=table.file,
-                    row=int(chunk.rows[place]),
-                    column=table.header[at],
                 )
                 state = CellState.NOT_SEARCHED
             out[k] = state

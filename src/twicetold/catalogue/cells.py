@@ -8,7 +8,7 @@ import unicodedata
 from typing import Final
 
 from twicetold.catalogue.limits import CELL_CHARS, ID_CHARS
-from twicetold.catalogue.notes import Notes, shown
+from twicetold.catalogue.notes import Spot, shown
 
 MISSING: Final = frozenset({"", "NA", "N/A", "?"})
 """Cells that say that a number, family, branch or region is not known."""
@@ -39,127 +39,97 @@ def as_number(text: str) -> float | None:
     return value if math.isfinite(value) else None
 
 
-def check_number(text: str, notes: Notes, *, file: str, row: int, column: str) -> float:
+def check_number(text: str, spot: Spot) -> float:
     """The number in a cell, or NaN with the reason noted."""
     value = as_number(text)
     if value is not None:
         return value
-    where = {"file": file, "row": row, "column": column}
     if _DECIMAL_COMMA.fullmatch(text):
-        notes.error(
+        spot.error(
             "decimal comma",
             f"{shown(text)} has a decimal comma.",
             "Write a decimal point, such as 52.5.",
-            **where,  # type: ignore[arg-type]
         )
     elif text.startswith("="):
-        notes.error(
+        spot.error(
             "formula",
             f"{shown(text)} is a formula.",
             "Replace it by its value (in the spreadsheet: paste as values).",
-            **where,  # type: ignore[arg-type]
         )
     elif "−" in text and as_number(text.replace("−", "-")) is not None:
-        notes.error(
+        spot.error(
             "minus sign",
             f"{shown(text)} has a typographic minus sign.",
             "Write a plain hyphen-minus, such as -12.5.",
-            **where,  # type: ignore[arg-type]
         )
     else:
         hint = " (decimal degrees, not degrees and minutes)" if re.search("[°'′]", text) else ""
-        notes.error(
+        spot.error(
             "not a number",
             f"{shown(text)} is not a number.",
             f"Write a plain decimal number{hint}, or leave the cell blank if it is not known.",
-            **where,  # type: ignore[arg-type]
         )
     return math.nan
 
 
-def clean_id(text: str, notes: Notes, *, file: str, row: int, column: str) -> str:
+def clean_id(text: str, spot: Spot) -> str:
     """An id without outer blanks, or an empty string with the reason noted."""
     trimmed = text.strip()
     if not trimmed:
-        notes.error(
-            "missing id",
-            "has no id.",
-            "Give every row an id, or remove the row.",
-            file=file,
-            row=row,
-            column=column,
-        )
+        spot.error("missing id", "has no id.", "Give every row an id, or remove the row.")
         return ""
     if len(trimmed) > ID_CHARS:
-        notes.error(
+        spot.error(
             "id too long",
             f"the id {shown(trimmed, 30)} has {len(trimmed):,} characters.",
             f"Use an id of at most {ID_CHARS} characters.",
-            file=file,
-            row=row,
-            column=column,
         )
         return ""
     if bad := _hidden(trimmed):
-        notes.error(
+        spot.error(
             "control character",
             f"the id {shown(trimmed)} holds the invisible character U+{ord(bad):04X}.",
             "Type the id again without it.",
-            file=file,
-            row=row,
-            column=column,
         )
         return ""
     if trimmed != text:
-        notes.warn(
+        spot.warn(
             "blanks around an id",
             f"the id {shown(text)} has blanks around it; they were left out.",
             "Remove the blanks.",
-            file=file,
-            row=row,
-            column=column,
         )
     return trimmed
 
 
-def clean_text(text: str, notes: Notes, *, file: str, row: int, column: str) -> str:
+def clean_text(text: str, spot: Spot) -> str:
     """A text cell on one line without outer blanks; faults are noted."""
     if len(text) > CELL_CHARS:
-        notes.error(
+        spot.error(
             "cell too long",
             f"has {len(text):,} characters.",
             f"Shorten it to at most {CELL_CHARS:,}; keep story texts out of the catalogue.",
-            file=file,
-            row=row,
-            column=column,
         )
         return ""
     if not text.isprintable():
         joined = _LINE_BREAKS.sub(" ", text)
         if bad := _hidden(joined):
-            notes.error(
+            spot.error(
                 "control character",
                 f"{shown(text)} holds the invisible character U+{ord(bad):04X}.",
                 "Type the cell again without it.",
-                file=file,
-                row=row,
-                column=column,
             )
             return ""
         text = joined
     return text.strip()
 
 
-def warn_formula(text: str, notes: Notes, *, file: str, row: int, column: str) -> None:
+def warn_formula(text: str, spot: Spot) -> None:
     """Warn of a text cell that a spreadsheet would run as a formula."""
     if text.startswith(_FORMULA_STARTS) and len(text) > 1 and as_number(text) is None:
-        notes.warn(
+        spot.warn(
             "looks like a formula",
             f"{shown(text)} would be taken for a formula by a spreadsheet.",
             "Begin it with a letter or figure if you can; it is kept as it is.",
-            file=file,
-            row=row,
-            column=column,
         )
 
 

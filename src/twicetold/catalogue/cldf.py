@@ -16,7 +16,7 @@ from typing import Any, BinaryIO, Final
 
 from twicetold.catalogue import limits
 from twicetold.catalogue.model import SourceFile
-from twicetold.catalogue.notes import Notes, shown
+from twicetold.catalogue.notes import Notes, Spot, shown
 from twicetold.catalogue.tables import Dialect, Table, open_table
 
 _ENCODINGS: Final = {
@@ -94,21 +94,17 @@ def open_cldf(path: Path, notes: Notes, sources: list[SourceFile]) -> CldfDatase
         return None
     entries = metadata.get("tables")
     if not isinstance(entries, list) or not entries or len(entries) > _MOST_TABLES:
-        notes.error(
-            "not CLDF",
-            "lists no tables.",
-            "Give the metadata file of a CLDF StructureDataset.",
-            file=path.name,
+        Spot(notes, path.name).error(
+            "not CLDF", "lists no tables.", "Give the metadata file of a CLDF StructureDataset."
         )
         return None
     module = str(metadata.get("dc:conformsTo", "")).rpartition("#")[2]
     if module != "StructureDataset":
-        notes.warn(
+        Spot(notes, path.name).warn(
             "other CLDF module",
             f"describes {shown(module or 'no module')}, not a StructureDataset; its values are "
             "read all the same.",
             "Check that each parameter is a motif.",
-            file=path.name,
         )
     tables: dict[str, CldfTable] = {}
     for entry in entries:
@@ -116,11 +112,8 @@ def open_cldf(path: Path, notes: Notes, sources: list[SourceFile]) -> CldfDatase
         if component not in ("ValueTable", "LanguageTable", "ParameterTable", "CodeTable"):
             continue
         if component in tables:
-            notes.error(
-                "repeated table",
-                f"lists two tables of the kind {component}.",
-                "Keep one.",
-                file=path.name,
+            Spot(notes, path.name).error(
+                "repeated table", f"lists two tables of the kind {component}.", "Keep one."
             )
             continue
         opened = _open(entry, metadata, path.parent, notes, sources)
@@ -128,11 +121,10 @@ def open_cldf(path: Path, notes: Notes, sources: list[SourceFile]) -> CldfDatase
             tables[component] = opened
     for component in ("ValueTable", "LanguageTable"):
         if component not in tables and not notes.broken:
-            notes.error(
+            Spot(notes, path.name).error(
                 "missing table",
                 f"lists no {component}.",
                 "The dataset needs values and languages (with coordinates).",
-                file=path.name,
             )
     if notes.broken:
         return None
@@ -151,11 +143,10 @@ def read_json(path: Path, most: int, notes: Notes, sources: list[SourceFile]) ->
 
     size = path.stat().st_size
     if size > most:
-        notes.error(
+        Spot(notes, path.name).error(
             "too large",
             f"is larger than {most // limits.MEBIBYTE} MiB.",
             "Check that it is the right file.",
-            file=path.name,
         )
         return None
     raw = path.read_bytes()
@@ -163,36 +154,29 @@ def read_json(path: Path, most: int, notes: Notes, sources: list[SourceFile]) ->
     try:
         found = json.loads(raw.decode("utf-8-sig"))
     except UnicodeDecodeError as exc:
-        notes.error(
+        Spot(notes, path.name).error(
             "not UTF-8",
             f"is not UTF-8: byte {exc.start + 1:,} of the file is 0x{raw[exc.start]:02X}.",
             "Save it with the encoding UTF-8.",
-            file=path.name,
         )
         return None
     except json.JSONDecodeError as exc:
-        notes.error(
+        Spot(notes, path.name, row=exc.lineno).error(
             "broken JSON",
             f"is no valid JSON (line {exc.lineno}, character {exc.colno}).",
             "Check it with a JSON validator.",
-            file=path.name,
-            row=exc.lineno,
         )
         return None
     except (RecursionError, ValueError):
-        notes.error(
+        Spot(notes, path.name).error(
             "broken JSON",
             "is nested too deeply or holds a number too long.",
             "Check that it is the right file.",
-            file=path.name,
         )
         return None
     if not isinstance(found, dict):
-        notes.error(
-            "broken JSON",
-            "holds no JSON object.",
-            "Check that it is the right file.",
-            file=path.name,
+        Spot(notes, path.name).error(
+            "broken JSON", "holds no JSON object.", "Check that it is the right file."
         )
         return None
     return found
@@ -278,20 +262,18 @@ def _column_name(column: Json, k: int) -> str:
 def _inside(url: object, folder: Path, notes: Notes) -> Path | None:
     """The file a table's ``url`` names, if it lies inside the dataset's own folder."""
     if not isinstance(url, str) or not url or "\x00" in url or len(url) > 1_000:
-        notes.error(
+        Spot(notes, "CLDF metadata").error(
             "bad table url",
             "a table of the dataset has no usable url.",
             "Give the file name of the table, inside the dataset's folder.",
-            file="CLDF metadata",
         )
         return None
     parts = url.replace("\\", "/").split("/")
     if "://" in url or url.startswith(("/", "~")) or ".." in parts or ":" in parts[0]:
-        notes.error(
+        Spot(notes, "CLDF metadata").error(
             "table outside the dataset",
             f"the table url {shown(url)} leads out of the dataset's folder.",
             "Put the table beside the metadata file; nothing is fetched from elsewhere.",
-            file="CLDF metadata",
         )
         return None
     root = folder.resolve()
@@ -301,20 +283,18 @@ def _inside(url: object, folder: Path, notes: Notes) -> Path | None:
         except (OSError, RuntimeError):
             continue
         if not path.is_relative_to(root):
-            notes.error(
+            Spot(notes, "CLDF metadata").error(
                 "table outside the dataset",
                 f"the table {shown(url)} is a link that leads out of the dataset's folder.",
                 "Put the file itself beside the metadata file.",
-                file="CLDF metadata",
             )
             return None
         if path.is_file():
             return path
-    notes.error(
+    Spot(notes, "CLDF metadata").error(
         "missing table",
         f"the file {shown(url)} is missing.",
         "Put it where the metadata say, or correct the url.",
-        file="CLDF metadata",
     )
     return None
 
@@ -329,19 +309,17 @@ def _opener(path: Path, notes: Notes) -> Any:
     except Exception:  # whatever a damaged archive raises
         members = []
     if len(members) != 1 or members[0].flag_bits & 1:
-        notes.error(
+        Spot(notes, path.name).error(
             "bad archive",
             "is not a .zip with one readable table.",
             "Unpack it, or pack the table alone.",
-            file=path.name,
         )
         return None
     if members[0].file_size > limits.TABLE_BYTES:
-        notes.error(
+        Spot(notes, path.name).error(
             "too large",
             f"would unpack to more than {limits.TABLE_BYTES // limits.MEBIBYTE:,} MiB.",
             "Split the dataset.",
-            file=path.name,
         )
         return None
 
@@ -368,11 +346,10 @@ def _dialect(entry: Json, metadata: Json, file: str, notes: Notes) -> Dialect | 
         and all(isinstance(x, int) and 0 <= x <= 1_000 for x in (header_rows, skip))
     )
     if not sound or encoding is None:
-        notes.error(
+        Spot(notes, file).error(
             "odd dialect",
             "is described with a dialect that cannot be read.",
             "Use one sign as delimiter and quoteChar, and UTF-8 as encoding.",
-            file=file,
         )
         return None
     return Dialect(

@@ -7,7 +7,7 @@ from collections.abc import Mapping
 from typing import Final
 
 from twicetold.catalogue.cells import access_of
-from twicetold.catalogue.notes import Notes, shown, suggestion
+from twicetold.catalogue.notes import shown, suggestion
 from twicetold.catalogue.tables import Chunk, Table
 
 Columns = Mapping[str, int]
@@ -44,7 +44,6 @@ def find_columns(
     table: Table,
     parts: Mapping[str, tuple[str, ...]],
     required: tuple[str, ...],
-    notes: Notes,
 ) -> dict[str, int] | None:
     """Index of the column of each part by name (any case); None when a required one is missing."""
     folded = {name.casefold(): k for k, name in reversed(list(enumerate(table.header))) if name}
@@ -58,20 +57,15 @@ def find_columns(
     for part in missing:
         name = parts[part][0]
         spare = [h for k, h in enumerate(table.header) if k not in found.values()]
-        notes.error(
+        table.spot(table.header_row, column=name).error(
             "missing column",
             f"has no column {name!r}.",
             f"Name the columns in the first row.{suggestion(name, spare)}",
-            file=table.file,
-            row=table.header_row,
-            column=name,
         )
     return None if missing else found
 
 
-def asked_columns(
-    table: Table, found: dict[str, int], asked: Mapping[str, str], notes: Notes
-) -> None:
+def asked_columns(table: Table, found: dict[str, int], asked: Mapping[str, str]) -> None:
     """Put the columns that the plan names for a part in place of the usual ones."""
     folded = {name.casefold(): k for k, name in enumerate(table.header) if name}
     for part, name in asked.items():
@@ -80,51 +74,47 @@ def asked_columns(
         if name.casefold() in folded:
             found[part] = folded[name.casefold()]
             continue
-        notes.error(
+        table.spot(table.header_row).error(
             "missing column",
             f"has no column {shown(name)}, which the plan names for {part}.",
             f"Correct the plan or the table.{suggestion(name, table.header)}",
-            file=table.file,
-            row=table.header_row,
         )
 
 
-def misspelt_access(table: Table, columns: Columns, notes: Notes) -> bool:
+def misspelt_access(table: Table, columns: Columns) -> bool:
     """Whether a column is named almost like ``access``; rows could slip through unprotected."""
     if "access" in columns:
         return False
     for name in table.header:
         closeness = difflib.SequenceMatcher(None, name.casefold()[:40], "access").ratio()
         if closeness > 0.8:
-            _say_access(table, name, "is named almost like 'access'", notes)
+            _say_access(table, name, "is named almost like 'access'")
             return True
     return False
 
 
-def unnamed_access(table: Table, chunk: Chunk, columns: Columns, notes: Notes) -> bool:
+def unnamed_access(table: Table, chunk: Chunk, columns: Columns) -> bool:
     """Whether access marks stand in a column that is not ``access``."""
     if "access" in columns:
         return False
     for name, cells in zip(table.header, chunk.columns, strict=True):
         marks = {c.strip().casefold() for c in set(cells) if len(c) < 20}
         if "withheld" in marks:
-            _say_access(table, name, "holds the mark 'withheld'", notes)
+            _say_access(table, name, "holds the mark 'withheld'")
             return True
     return False
 
 
-def _say_access(table: Table, name: str, why: str, notes: Notes) -> None:
-    notes.error(
+def _say_access(table: Table, name: str, why: str) -> None:
+    table.spot(table.header_row).error(
         "unclear access",
         f"the column {shown(name)} {why}, so rows meant to be protected might not be.",
         "Name the column 'access' (with open, restricted or withheld), or rename it clearly.",
-        file=table.file,
-        row=table.header_row,
     )
 
 
 def row_access(
-    table: Table, columns: Columns, cells: tuple[str, ...] | None, k: int, row: int, notes: Notes
+    table: Table, columns: Columns, cells: tuple[str, ...] | None, k: int, row: int
 ) -> str:
     """Access of one row; an unknown mark is noted and treated as withheld."""
     if cells is None:
@@ -132,12 +122,9 @@ def row_access(
     access = access_of(cells[k])
     if access:
         return access
-    notes.error(
+    table.spot(row, columns["access"]).error(
         "unknown access",
         f"{shown(cells[k], 30)} is no kind of access.",
         "Write open, restricted or withheld; a blank means open.",
-        file=table.file,
-        row=row,
-        column=table.header[columns["access"]],
     )
     return "withheld"

@@ -6,20 +6,19 @@ from collections.abc import Mapping
 
 import numpy as np
 
-from twicetold.catalogue.attestations import UNKNOWN
+from twicetold.catalogue.attestations import UNKNOWN, say_unknown
 from twicetold.catalogue.cells import clean_id
 from twicetold.catalogue.columns import find_columns
 from twicetold.catalogue.model import IntArray
-from twicetold.catalogue.notes import Notes, shown, suggestion
 from twicetold.catalogue.tables import Table
 from twicetold.catalogue.traditions import HIDDEN, TraditionRows
 
 
 def read_contacts(
-    table: Table, parts: Mapping[str, tuple[str, ...]], traditions: TraditionRows, notes: Notes
+    table: Table, parts: Mapping[str, tuple[str, ...]], traditions: TraditionRows
 ) -> IntArray | None:
     """(C, 2) int32 edges i < j, sorted; contacts of traditions left out are passed over."""
-    columns = find_columns(table, parts, ("tradition", "neighbour"), notes)
+    columns = find_columns(table, parts, ("tradition", "neighbour"))
     if columns is None:
         return None
     n = len(traditions.located)
@@ -27,52 +26,33 @@ def read_contacts(
     for chunk in table.chunks():
         for k, row in enumerate(chunk.rows.tolist()):
             ends = [
-                _end(table, chunk.columns[columns[part]][k], columns[part], row, traditions, notes)
+                _end(table, chunk.columns[columns[part]][k], columns[part], row, traditions)
                 for part in ("tradition", "neighbour")
             ]
             if min(ends) < 0 or max(ends) >= n:
                 continue
             if ends[0] == ends[1]:
-                notes.error(
-                    "contact with itself",
-                    "joins a tradition with itself.",
-                    "Remove the row.",
-                    file=table.file,
-                    row=row,
+                table.spot(row).error(
+                    "contact with itself", "joins a tradition with itself.", "Remove the row."
                 )
                 continue
             pair = (min(ends), max(ends))
             if pair in seen:
-                notes.warn(
+                table.spot(row).warn(
                     "repeated contact",
                     f"repeats row {seen[pair]}; contacts have no direction.",
                     "Remove one of the rows.",
-                    file=table.file,
-                    row=row,
                 )
                 continue
             seen[pair] = row
     return np.array(sorted(seen), dtype=np.int32).reshape(-1, 2)
 
 
-def _end(table: Table, raw: str, at: int, row: int, traditions: TraditionRows, notes: Notes) -> int:
+def _end(table: Table, raw: str, at: int, row: int, traditions: TraditionRows) -> int:
     code = traditions.index.get(raw.strip(), UNKNOWN)
     if code == HIDDEN:
         return HIDDEN
-    identity = clean_id(raw, notes, file=table.file, row=row, column=table.header[at])
+    identity = clean_id(raw, table.spot(row, at))
     if code == UNKNOWN and identity:
-        kind = "unknown tradition"
-        hint = (
-            ""
-            if notes.full(kind, table.file, table.header[at])
-            else suggestion(identity, traditions.public_ids)
-        )
-        notes.error(
-            kind,
-            f"the tradition {shown(identity)} is not in {traditions.file}.",
-            f"Add it there or correct the id.{hint}",
-            file=table.file,
-            row=row,
-            column=table.header[at],
-        )
+        say_unknown(table.spot(row, at), identity, traditions)
     return code

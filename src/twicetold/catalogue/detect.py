@@ -9,7 +9,7 @@ from typing import BinaryIO, Final
 
 from twicetold.catalogue.cldf import is_cldf_metadata
 from twicetold.catalogue.model import SourceFile
-from twicetold.catalogue.notes import Notes
+from twicetold.catalogue.notes import Notes, Spot
 from twicetold.catalogue.tables import Table, open_table
 
 NAMES: Final = ("traditions", "motifs", "attestations", "surveyed", "contacts", "matrix")
@@ -29,11 +29,10 @@ class Found:
 def detect(path: Path, notes: Notes) -> Found | None:
     """Say what lies at the path; None, with the reason, when it is no catalogue."""
     if not path.exists():
-        notes.error(
+        Spot(notes, path.name or str(path)).error(
             "nothing there",
             "does not exist.",
             "Give a folder of tables, an .xlsx workbook or a CLDF metadata file.",
-            file=path.name or str(path),
         )
         return None
     if path.is_dir():
@@ -48,7 +47,7 @@ def detect(path: Path, notes: Notes) -> Found | None:
         remedy = "Give the folder that holds the tables, not one of them."
     elif suffix in (".xls", ".ods", ".numbers"):
         remedy = "Save it as .xlsx, or as CSV UTF-8 tables in a folder."
-    notes.error("not a catalogue", "is not a catalogue.", remedy, file=path.name)
+    Spot(notes, path.name).error("not a catalogue", "is not a catalogue.", remedy)
     return None
 
 
@@ -63,18 +62,16 @@ def _detect_folder(folder: Path, notes: Notes) -> Found | None:
         if len(cldf) == 1:
             return Found("cldf", place, cldf[0])
         if len(cldf) > 1:
-            notes.error(
+            Spot(notes, place.name or str(place)).error(
                 "several datasets",
                 f"holds {len(cldf)} CLDF datasets.",
                 "Give the metadata file of the one that is meant.",
-                file=place.name or str(place),
             )
             return None
-    notes.error(
+    Spot(notes, folder.name or str(folder)).error(
         "missing table",
         "holds no traditions table and no CLDF metadata.",
         "Put traditions.csv and attestations.csv (or matrix.csv) there.",
-        file=folder.name or str(folder),
     )
     return None
 
@@ -95,22 +92,18 @@ def folder_tables(folder: Path, notes: Notes, sources: list[SourceFile]) -> dict
     for name in NAMES:
         found = _candidates(folder, name)
         if len(found) > 1:
-            notes.error(
+            Spot(notes, name).error(
                 "two tables",
                 f"stands there {len(found)} times ({', '.join(p.name for p in found)}).",
                 "Keep one of them.",
-                file=name,
             )
             continue
         if not found:
             continue
         path = found[0]
         if not path.is_file():
-            notes.error(
-                "not a file",
-                "is not an ordinary file.",
-                "Put the table itself there.",
-                file=path.name,
+            Spot(notes, path.name).error(
+                "not a file", "is not an ordinary file.", "Put the table itself there."
             )
             continue
         table = open_table(_opener(path), path.name, notes, sources=sources)

@@ -12,7 +12,7 @@ import numpy.typing as npt
 import scipy.sparse as sp
 
 from twicetold.catalogue.model import BoolArray, Catalogue, SourceFile
-from twicetold.catalogue.notes import Notes, shown
+from twicetold.catalogue.notes import Notes, Spot, shown
 from twicetold.catalogue.traditions import Tradition
 
 if TYPE_CHECKING:
@@ -46,17 +46,15 @@ def freeze(
     """Make the Catalogue; None when the whole has a fault that no single row shows."""
     motifs, presence, located = parts.motifs, parts.presence, parts.traditions.located
     if not motifs.ids:
-        notes.error(
-            "no motifs",
-            "has no motif that may enter.",
-            "List at least one motif with its records.",
-            file=parts.file,
+        Spot(notes, parts.file).error(
+            "no motifs", "has no motif that may enter.", "List at least one motif with its records."
         )
         return None
     order = np.array(sorted(range(len(motifs.ids)), key=motifs.ids.__getitem__), dtype=np.intp)
     attested = freeze_sparse(sp.csr_array(presence.attested[order]))
     sets, of = distinct_sets(presence.surveyed_sets, presence.surveyed_of[order])
-    _warn_constant(parts, attested, sets, of, order, notes)
+    searched = np.array([np.count_nonzero(s) for s in sets])[of]
+    _warn_constant(parts, np.diff(attested.indptr), searched, order, notes)
     catalogue = Catalogue(
         title=parts.about.title,
         notice=parts.about.shown_notice(),
@@ -123,15 +121,12 @@ def _labels(located: list[Tradition]) -> dict[str, tuple[str, ...]]:
 
 def _warn_constant(
     parts: Parts,
-    attested: sp.csr_array,
-    sets: tuple[BoolArray, ...],
-    of: npt.NDArray[np.int32],
+    holders: npt.NDArray[np.integer],
+    searched: npt.NDArray[np.integer],
     order: npt.NDArray[np.intp],
     notes: Notes,
 ) -> None:
     """Warn of motifs that nobody or everybody searched holds: nothing about them can be tested."""
-    holders = np.diff(attested.indptr)
-    searched = np.array([np.count_nonzero(s) for s in sets])[of]
     motifs = parts.motifs
     remedy = "It is listed, but cannot be tested."
     for k in np.flatnonzero((holders == 0) | (holders == searched)).tolist():
@@ -145,4 +140,4 @@ def _warn_constant(
         else:
             kind = "everybody holds it"
             what = f"is attested in all {int(searched[k]):,} traditions searched for it."
-        notes.warn(kind, f"the motif {name} {what}", remedy, file=parts.file)
+        Spot(notes, parts.file).warn(kind, f"the motif {name} {what}", remedy)

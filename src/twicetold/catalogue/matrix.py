@@ -2,18 +2,18 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import Final
 
 import numpy as np
 import numpy.typing as npt
 
 from twicetold.catalogue import limits
-from twicetold.catalogue.attestations import UNKNOWN
+from twicetold.catalogue.attestations import UNKNOWN, say_unknown
 from twicetold.catalogue.cells import clean_id, clean_text, optional_text, warn_formula
 from twicetold.catalogue.model import CellState, IntArray
 from twicetold.catalogue.motifs import MotifRows
-from twicetold.catalogue.notes import Notes, shown, suggestion
+from twicetold.catalogue.notes import Spot, shown
 from twicetold.catalogue.presence import Presence, SurveyedSets, sparse_cells
 from twicetold.catalogue.tables import Chunk, Table
 from twicetold.catalogue.traditions import HIDDEN, TraditionRows
@@ -37,17 +37,48 @@ States = npt.NDArray[np.int8]
 
 
 @dataclass
-class _Sparse:
-    """Attested and not applicable cells found so far, as (row, column) codes."""
+class _Harvest:
+    """Presence as it grows, one motif at a time."""
 
-    motif: list[IntArray]
-    tradition: list[IntArray]
-    state: list[States]
+    n: int
+    sets: SurveyedSets
+    motif: list[IntArray] = field(default_factory=list)
+    tradition: list[IntArray] = field(default_factory=list)
+    state: list[States] = field(default_factory=list)
+    surveyed_of: dict[int, int] = field(default_factory=dict)
+    unlocated: dict[int, int] = field(default_factory=dict)
+
+    def add(self, motif: int, states: States) -> None:
+        """Take in the states of one motif in all traditions, the located ones first."""
+        here = states[: self.n]
+        searched = (here == CellState.ABSENT) | (here == CellState.ATTESTED)
+        self.surveyed_of[motif] = self.sets.code(searched)
+        self.unlocated[motif] = int(np.count_nonzero(states[self.n :] == CellState.ATTESTED))
+        marked = np.flatnonzero(here >= CellState.ATTESTED).astype(np.int32)
+        self.motif.append(np.full(len(marked), motif, dtype=np.int32))
+        self.tradition.append(marked)
+        self.state.append(here[marked])
+
+    def presence(self, m: int) -> Presence:
+        """Put the motifs in order of their code; one without a row was searched nowhere."""
+        motif = np.concatenate(self.motif) if self.motif else np.empty(0, dtype=np.int32)
+        place = np.concatenate(self.tradition) if self.tradition else np.empty(0, dtype=np.int32)
+        state = np.concatenate(self.state) if self.state else np.empty(0, dtype=np.int8)
+        order = np.argsort(motif, kind="stable")
+        motif, place, state = motif[order], place[order], state[order]
+        nowhere = -1
+        if len(self.surveyed_of) < m:
+            nowhere = self.sets.code(np.zeros(self.n, dtype=bool))
+        return Presence(
+            sparse_cells(motif, place, state == CellState.ATTESTED, m, self.n),
+            sparse_cells(motif, place, state == CellState.NOT_APPLICABLE, m, self.n),
+            self.sets.sets,
+            np.array([self.surveyed_of.get(k, nowhere) for k in range(m)], dtype=np.int32),
+            np.array([self.unlocated.get(k, 0) for k in range(m)], dtype=np.int32),
+        )
 
 
-def read_matrix(
-    table: Table, traditions: TraditionRows, motifs: MotifRows, notes: Notes
-) -> Presence | None:
+def read_matrix(table: Table, traditions: TraditionRows, motifs: MotifRows) -> Presence | None:
     """Read a wide matrix; new motifs are added when no motifs table listed them."""
     first = table.header[0].casefold() if table.header else ""
     if first in _BY_MOTIF:
@@ -55,136 +86,86 @@ def read_matrix(
     elif first in _BY_TRADITION:
         transposed = True
     else:
-        notes.error(
+        table.spot(table.header_row).error(
             "missing column",
             f"begins with the column {shown(table.header[0] if table.header else '')}.",
             "Call the first column 'motif_id' (the others then are tradition ids), or "
             "'tradition_id' (the others then are motif ids).",
-            file=table.file,
-            row=table.header_row,
         )
         return None
     if len(table.header) * table.lines > limits.MATRIX_CELLS:
-        _say_too_large(table, notes)
+        _say_too_large(table)
         return None
     if transposed:
-        return _read_transposed(table, traditions, motifs, notes)
-    return _read_by_motif(table, traditions, motifs, notes)
+        return _read_transposed(table, traditions, motifs)
+    return _read_by_motif(table, traditions, motifs)
 
 
-def _say_too_large(table: Table, notes: Notes) -> None:
-    notes.error(
+def _say_too_large(table: Table) -> None:
+    table.spot().error(
         "matrix too large",
         f"has more than {limits.MATRIX_CELLS:,} cells.",
         "Give it as an attestations table (motif_id, tradition_id), one row per record.",
-        file=table.file,
     )
 
 
-def _read_by_motif(
-    table: Table, traditions: TraditionRows, motifs: MotifRows, notes: Notes
-) -> Presence | None:
+def _read_by_motif(table: Table, traditions: TraditionRows, motifs: MotifRows) -> Presence | None:
     beside = {h.casefold(): k for k, h in enumerate(table.header) if h.casefold() in _BESIDE}
     across = [k for k in range(1, len(table.header)) if k not in beside.values()]
-    codes = _tradition_codes(table, across, traditions, notes)
+    codes = _tradition_codes(table, across, traditions)
+    visible = codes >= 0
     n = len(traditions.located)
-    sets = SurveyedSets(n)
-    found = _Sparse([], [], [])
-    surveyed_of: dict[int, int] = {}
-    unlocated: dict[int, int] = {}
+    harvest = _Harvest(n, SurveyedSets(n))
     seen: dict[int, int] = {}
     cells_read = 0
     for chunk in table.chunks():
         cells_read += len(chunk.rows) * len(table.header)
-        if cells_read > limits.MATRIX_CELLS:
-            _say_too_large(table, notes)
+        if cells_read > limits.MATRIX_CELLS or harvest.sets.too_many:
+            _say_too_large(table)
             return None
-        block = _states(table, chunk, across, codes, notes)
+        block = _states(table, chunk, across, codes)
         for k, row in enumerate(chunk.rows.tolist()):
-            motif = _motif_of(table, chunk, k, row, motifs, seen, beside, notes)
-            if motif < 0:
+            motif = _motif_of(table, chunk, k, motifs, beside)
+            if motif < 0 or not _is_first(motif, seen, table.spot(row, 0), "motif"):
                 continue
             states = np.zeros(n + len(traditions.unlocated), dtype=np.int8)
-            visible = codes >= 0
             states[codes[visible]] = block[visible, k]
-            _say_bad(table, chunk, k, row, block[:, k], across, visible, notes)
-            here = states[:n]
-            surveyed_of[motif] = sets.code((here == 1) | (here == 2))
-            unlocated[motif] = int(np.count_nonzero(states[n:] == CellState.ATTESTED))
-            marked = np.flatnonzero(here >= CellState.ATTESTED).astype(np.int32)
-            found.motif.append(np.full(len(marked), motif, dtype=np.int32))
-            found.tradition.append(marked)
-            found.state.append(here[marked])
-            if sets.too_many:
-                _say_too_large(table, notes)
-                return None
-    return _gather(found, sets, surveyed_of, unlocated, len(motifs.ids), n)
+            harvest.add(motif, states)
+    return harvest.presence(len(motifs.ids))
 
 
-def _read_transposed(
-    table: Table, traditions: TraditionRows, motifs: MotifRows, notes: Notes
-) -> Presence | None:
+def _read_transposed(table: Table, traditions: TraditionRows, motifs: MotifRows) -> Presence | None:
     across = list(range(1, len(table.header)))
-    codes = _motif_columns(table, across, motifs, notes)
     n, extra = len(traditions.located), len(traditions.unlocated)
     if len(across) * (n + extra) > limits.MATRIX_CELLS:
-        _say_too_large(table, notes)
+        _say_too_large(table)
         return None
+    codes = _motif_columns(table, across, motifs)
     whole = np.zeros((len(across), n + extra), dtype=np.int8)
     seen: dict[int, int] = {}
+    hidden = np.flatnonzero(codes < 0)
     for chunk in table.chunks():
-        block = _states(table, chunk, across, codes, notes)
-        for k, row in enumerate(chunk.rows.tolist()):
-            place = _tradition_of(table, chunk, k, row, traditions, seen, notes)
-            if place < 0:
-                continue
-            _say_bad(table, chunk, k, row, block[:, k], across, codes >= 0, notes)
-            whole[:, place] = block[:, k]
-    sets = SurveyedSets(n)
-    found = _Sparse([], [], [])
-    surveyed_of: dict[int, int] = {}
-    unlocated: dict[int, int] = {}
+        places = [_tradition_of(table, chunk, k, traditions) for k in range(len(chunk.rows))]
+        block = _states(table, chunk, across, codes, np.array(places) < 0)
+        for k, (row, place) in enumerate(zip(chunk.rows.tolist(), places, strict=True)):
+            if place >= 0 and _is_first(place, seen, table.spot(row, 0), "tradition"):
+                whole[:, place] = block[:, k]
+    whole[hidden] = CellState.NOT_SEARCHED
+    harvest = _Harvest(n, SurveyedSets(n))
     for column, motif in enumerate(codes.tolist()):
-        if motif < 0:
-            continue
-        here = whole[column, :n]
-        surveyed_of[motif] = sets.code((here == 1) | (here == 2))
-        unlocated[motif] = int(np.count_nonzero(whole[column, n:] == CellState.ATTESTED))
-        marked = np.flatnonzero(here >= CellState.ATTESTED).astype(np.int32)
-        found.motif.append(np.full(len(marked), motif, dtype=np.int32))
-        found.tradition.append(marked)
-        found.state.append(here[marked])
-    return _gather(found, sets, surveyed_of, unlocated, len(motifs.ids), n)
+        if motif >= 0:
+            harvest.add(motif, whole[column])
+    return harvest.presence(len(motifs.ids))
 
 
-def _gather(
-    found: _Sparse,
-    sets: SurveyedSets,
-    surveyed_of: dict[int, int],
-    unlocated: dict[int, int],
-    m: int,
-    n: int,
-) -> Presence:
-    """Put the rows in order of their motif; a motif without a row was searched nowhere."""
-    motif = np.concatenate(found.motif) if found.motif else np.empty(0, dtype=np.int32)
-    place = np.concatenate(found.tradition) if found.tradition else np.empty(0, dtype=np.int32)
-    state = np.concatenate(found.state) if found.state else np.empty(0, dtype=np.int8)
-    order = np.argsort(motif, kind="stable")
-    motif, place, state = motif[order], place[order], state[order]
-    nowhere = -1
-    if len(surveyed_of) < m:
-        nowhere = sets.code(np.zeros(n, dtype=bool))
-    return Presence(
-        sparse_cells(motif, place, state == CellState.ATTESTED, m, n),
-        sparse_cells(motif, place, state == CellState.NOT_APPLICABLE, m, n),
-        sets.sets,
-        np.array([surveyed_of.get(k, nowhere) for k in range(m)], dtype=np.int32),
-        np.array([unlocated.get(k, 0) for k in range(m)], dtype=np.int32),
-    )
-
-
-def _states(table: Table, chunk: Chunk, across: list[int], codes: IntArray, notes: Notes) -> States:
-    """(columns, rows) int8 of the cells; ``_BAD`` where a cell is none of the allowed marks."""
+def _states(
+    table: Table,
+    chunk: Chunk,
+    across: list[int],
+    codes: IntArray,
+    passed_over: npt.NDArray[np.bool_] | None = None,
+) -> States:
+    """(columns, rows) int8 of the cells; a cell that is none of the allowed marks is noted."""
     out = np.zeros((len(across), len(chunk.rows)), dtype=np.int8)
     words: dict[str, int] = {k: int(v) for k, v in CELL_WORDS.items()}
     for j, at in enumerate(across):
@@ -194,52 +175,32 @@ def _states(table: Table, chunk: Chunk, across: list[int], codes: IntArray, note
         for word in set(cells) - words.keys():
             words[word] = int(CELL_WORDS.get(word.strip(), _BAD))
         out[j] = np.fromiter(map(words.__getitem__, cells), dtype=np.int8, count=len(cells))
+    bad = out == _BAD
+    if bad.any():
+        if passed_over is not None:
+            bad[:, passed_over] = False
+        for k, j in np.argwhere(bad.T).tolist():
+            table.spot(int(chunk.rows[k]), across[j]).error(
+                "unknown mark",
+                f"{shown(chunk.columns[across[j]][k])} is no mark of the matrix.",
+                "Write 1 (attested), 0 (searched and absent), blank (not searched) or NA "
+                "(not applicable).",
+            )
+        out[out == _BAD] = CellState.NOT_SEARCHED
     return out
 
 
-def _say_bad(
-    table: Table,
-    chunk: Chunk,
-    k: int,
-    row: int,
-    states: States,
-    across: list[int],
-    visible: npt.NDArray[np.bool_],
-    notes: Notes,
-) -> None:
-    for j in np.flatnonzero((states == _BAD) & visible).tolist():
-        notes.error(
-            "unknown mark",
-            f"{shown(chunk.columns[across[j]][k])} is no mark of the matrix.",
-            "Write 1 (attested), 0 (searched and absent), blank (not searched) or NA "
-            "(not applicable).",
-            file=table.file,
-            row=row,
-            column=table.header[across[j]][: limits.ID_CHARS],
-        )
-
-
-def _tradition_codes(
-    table: Table, across: list[int], traditions: TraditionRows, notes: Notes
-) -> IntArray:
+def _tradition_codes(table: Table, across: list[int], traditions: TraditionRows) -> IntArray:
     out = np.empty(len(across), dtype=np.int32)
     for j, at in enumerate(across):
         name = table.header[at]
         out[j] = traditions.index.get(name, UNKNOWN) if name else HIDDEN
         if out[j] == UNKNOWN:
-            _say_unknown(
-                "tradition",
-                name,
-                traditions.public_ids,
-                traditions.file,
-                table,
-                table.header_row,
-                notes,
-            )
+            say_unknown(table.spot(table.header_row), name, traditions)
     return out
 
 
-def _motif_columns(table: Table, across: list[int], motifs: MotifRows, notes: Notes) -> IntArray:
+def _motif_columns(table: Table, across: list[int], motifs: MotifRows) -> IntArray:
     out = np.empty(len(across), dtype=np.int32)
     for j, at in enumerate(across):
         name = table.header[at]
@@ -247,101 +208,52 @@ def _motif_columns(table: Table, across: list[int], motifs: MotifRows, notes: No
         if out[j] != UNKNOWN:
             continue
         if motifs.closed:
-            _say_unknown(
-                "motif", name, motifs.public_ids, motifs.file, table, table.header_row, notes
-            )
+            say_unknown(table.spot(table.header_row), name, motifs)
             continue
-        identity = clean_id(
-            name, notes, file=table.file, row=table.header_row, column=name[: limits.ID_CHARS]
-        )
+        identity = clean_id(name, table.spot(table.header_row, column=name))
         out[j] = motifs.add(identity) if identity else HIDDEN
     return out
 
 
-def _motif_of(
-    table: Table,
-    chunk: Chunk,
-    k: int,
-    row: int,
-    motifs: MotifRows,
-    seen: dict[int, int],
-    beside: dict[str, int],
-    notes: Notes,
-) -> int:
-    raw = chunk.columns[0][k]
+def _motif_of(table: Table, chunk: Chunk, k: int, motifs: MotifRows, beside: dict[str, int]) -> int:
+    raw, row = chunk.columns[0][k], int(chunk.rows[k])
     code = motifs.index.get(raw.strip(), UNKNOWN)
     if code == HIDDEN:
         return HIDDEN
-    identity = clean_id(raw, notes, file=table.file, row=row, column=table.header[0])
+    identity = clean_id(raw, table.spot(row, 0))
     if not identity:
         return HIDDEN
-    if code == UNKNOWN:
-        if motifs.closed:
-            _say_unknown("motif", identity, motifs.public_ids, motifs.file, table, row, notes)
-            return HIDDEN
-        text = {"name": "", "category": ""}
-        for part, at in beside.items():
-            text[part] = clean_text(
-                chunk.columns[at][k], notes, file=table.file, row=row, column=table.header[at]
-            )
-            warn_formula(text[part], notes, file=table.file, row=row, column=table.header[at])
-        warn_formula(identity, notes, file=table.file, row=row, column=table.header[0])
-        code = motifs.add(identity, text["name"], optional_text(text["category"]), row=row)
-    return _once(code, row, seen, table, "motif", notes)
+    if code != UNKNOWN:
+        return code
+    if motifs.closed:
+        say_unknown(table.spot(row), identity, motifs)
+        return HIDDEN
+    text = {"name": "", "category": ""}
+    for part, at in beside.items():
+        text[part] = clean_text(chunk.columns[at][k], table.spot(row, at))
+        warn_formula(text[part], table.spot(row, at))
+    warn_formula(identity, table.spot(row, 0))
+    return motifs.add(identity, text["name"], optional_text(text["category"]), row=row)
 
 
-def _tradition_of(
-    table: Table,
-    chunk: Chunk,
-    k: int,
-    row: int,
-    traditions: TraditionRows,
-    seen: dict[int, int],
-    notes: Notes,
-) -> int:
-    raw = chunk.columns[0][k]
+def _tradition_of(table: Table, chunk: Chunk, k: int, traditions: TraditionRows) -> int:
+    raw, row = chunk.columns[0][k], int(chunk.rows[k])
     code = traditions.index.get(raw.strip(), UNKNOWN)
     if code == HIDDEN:
         return HIDDEN
-    identity = clean_id(raw, notes, file=table.file, row=row, column=table.header[0])
-    if code == UNKNOWN:
-        if identity:
-            _say_unknown(
-                "tradition", identity, traditions.public_ids, traditions.file, table, row, notes
-            )
-        return HIDDEN
-    return _once(code, row, seen, table, "tradition", notes)
+    identity = clean_id(raw, table.spot(row, 0))
+    if identity and code == UNKNOWN:
+        say_unknown(table.spot(row), identity, traditions)
+    return code if identity and code != UNKNOWN else HIDDEN
 
 
-def _once(code: int, row: int, seen: dict[int, int], table: Table, kind: str, notes: Notes) -> int:
+def _is_first(code: int, seen: dict[int, int], spot: Spot, kind: str) -> bool:
     if code in seen:
-        notes.error(
+        spot.error(
             f"repeated {kind}",
             f"stands for the same {kind} as row {seen[code]}.",
             f"Give each {kind} one row.",
-            file=table.file,
-            row=row,
-            column=table.header[0],
         )
-        return HIDDEN
-    seen[code] = row
-    return code
-
-
-def _say_unknown(
-    kind: str,
-    identity: str,
-    known: list[str],
-    home: str,
-    table: Table,
-    row: int,
-    notes: Notes,
-) -> None:
-    hint = "" if notes.full(f"unknown {kind}", table.file) else suggestion(identity, known)
-    notes.error(
-        f"unknown {kind}",
-        f"the {kind} {shown(identity)} is not in {home or 'the catalogue'}.",
-        f"Add it there or correct the id.{hint}",
-        file=table.file,
-        row=row,
-    )
+        return False
+    seen[code] = spot.row
+    return True

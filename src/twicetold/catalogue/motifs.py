@@ -6,7 +6,7 @@ from dataclasses import dataclass, field
 
 from twicetold.catalogue.cells import clean_id, clean_text, optional_text, warn_formula
 from twicetold.catalogue.columns import Columns, misspelt_access, row_access, unnamed_access
-from twicetold.catalogue.notes import Notes, shown
+from twicetold.catalogue.notes import shown
 from twicetold.catalogue.rules import CatalogueRules
 from twicetold.catalogue.tables import Table
 from twicetold.catalogue.traditions import HIDDEN
@@ -49,101 +49,83 @@ class MotifRows:
         return [i for i, a in zip(self.ids, self.access, strict=True) if a == "open"]
 
 
-def read_motifs(
-    table: Table, columns: Columns, rules: CatalogueRules, notes: Notes
-) -> MotifRows | None:
+def read_motifs(table: Table, columns: Columns, rules: CatalogueRules) -> MotifRows | None:
     """Read and check the motifs table; None when it cannot be used at all."""
-    if misspelt_access(table, columns, notes):
+    if misspelt_access(table, columns):
         return None
     out = MotifRows(table.file, closed=True)
     hidden: set[str] = set()
     at = columns["id"]
     for chunk in table.chunks():
-        if unnamed_access(table, chunk, columns, notes):
+        if unnamed_access(table, chunk, columns):
             return None
         marks = chunk.columns[columns["access"]] if "access" in columns else None
         for k, row in enumerate(chunk.rows.tolist()):
-            access = row_access(table, columns, marks, k, row, notes)
+            access = row_access(table, columns, marks, k, row)
             raw = chunk.columns[at][k]
             if access == "withheld" or (access == "restricted" and not rules.restricted):
                 out.withheld += access == "withheld"
                 out.restricted += access == "restricted"
                 hidden.add(raw.strip())
                 continue
-            identity = clean_id(raw, notes, file=table.file, row=row, column=table.header[at])
+            identity = clean_id(raw, table.spot(row, at))
             if not identity:
                 hidden.add(raw.strip())
                 continue
-            warn_formula(identity, notes, file=table.file, row=row, column=table.header[at])
+            warn_formula(identity, table.spot(row, at))
             if identity == "*":
-                _say_reserved(table, at, row, notes)
+                _say_reserved(table, at, row)
                 continue
             if identity in out.index:
-                _say_repeated(table, at, row, out, identity, notes)
+                _say_repeated(table, at, row, out, identity)
                 continue
             name, category = (
-                _text(table, columns, part, [c[k] for c in chunk.columns], row, notes)
+                _text(table, columns, part, [c[k] for c in chunk.columns], row)
                 for part in ("name", "category")
             )
             out.add(identity, name, optional_text(category), access, row)
     hidden.update(cells[at].strip() for cells in table.ragged if len(cells) > at)
-    return _settle(out, hidden, table, at, notes)
+    return _settle(out, hidden, table, at)
 
 
-def _text(
-    table: Table, columns: Columns, part: str, cells: list[str], row: int, notes: Notes
-) -> str:
+def _text(table: Table, columns: Columns, part: str, cells: list[str], row: int) -> str:
     if part not in columns or cells[columns[part]] in table.nulls.get(columns[part], ()):
         return ""
     column = table.header[columns[part]]
-    out = clean_text(cells[columns[part]], notes, file=table.file, row=row, column=column)
-    warn_formula(out, notes, file=table.file, row=row, column=column)
+    out = clean_text(cells[columns[part]], table.spot(row, column=column))
+    warn_formula(out, table.spot(row, column=column))
     return out
 
 
-def _say_repeated(
-    table: Table, at: int, row: int, out: MotifRows, identity: str, notes: Notes
-) -> None:
+def _say_repeated(table: Table, at: int, row: int, out: MotifRows, identity: str) -> None:
     code = out.index[identity]
     name = shown(identity) if out.access[code] == "open" else "of a restricted row"
-    notes.error(
+    table.spot(row, at).error(
         "repeated motif",
         f"the id {name} already stands in row {out.rows[code]}.",
         "Give each motif one row and its own id.",
-        file=table.file,
-        row=row,
-        column=table.header[at],
     )
 
 
-def _say_reserved(table: Table, at: int, row: int, notes: Notes) -> None:
-    notes.error(
-        "reserved id",
-        "the id '*' stands for every motif.",
-        "Give the motif another id.",
-        file=table.file,
-        row=row,
-        column=table.header[at],
+def _say_reserved(table: Table, at: int, row: int) -> None:
+    table.spot(row, at).error(
+        "reserved id", "the id '*' stands for every motif.", "Give the motif another id."
     )
 
 
-def _settle(out: MotifRows, hidden: set[str], table: Table, at: int, notes: Notes) -> MotifRows:
+def _settle(out: MotifRows, hidden: set[str], table: Table, at: int) -> MotifRows:
     for identity in hidden:
         if identity in out.index:
-            notes.error(
+            table.spot(out.rows[out.index[identity]], at).error(
                 "repeated motif",
                 "its id stands in more than one row of the table.",
                 "Give each motif one row and its own id.",
-                file=table.file,
-                row=out.rows[out.index[identity]],
-                column=table.header[at],
             )
         out.index[identity] = HIDDEN
-    if not out.ids and not notes.broken:
-        notes.error(
+    if not out.ids and not table.notes.broken:
+        table.spot().error(
             "no motifs",
             "has no motif that may enter.",
             "List the motifs, one a row, or leave the table out.",
-            file=table.file,
         )
     return out

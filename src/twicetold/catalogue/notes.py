@@ -66,17 +66,13 @@ class Notes:
         self._errors: dict[tuple[str, str, str], _Pile] = {}
         self._warnings: dict[tuple[str, str, str], _Pile] = {}
 
-    def error(
-        self, kind: str, what: str, remedy: str, *, file: str, row: int = 0, column: str = ""
-    ) -> None:
+    def error(self, kind: str, problem: Problem) -> None:
         """Record something that must be mended before anything is computed."""
-        _drop_on(self._errors, kind, Problem(file, row, column, what, remedy))
+        _drop_on(self._errors, kind, problem)
 
-    def warn(
-        self, kind: str, what: str, remedy: str, *, file: str, row: int = 0, column: str = ""
-    ) -> None:
+    def warn(self, kind: str, problem: Problem) -> None:
         """Record something worth knowing."""
-        _drop_on(self._warnings, kind, Problem(file, row, column, what, remedy))
+        _drop_on(self._warnings, kind, problem)
 
     def full(self, kind: str, file: str, column: str = "") -> bool:
         """Whether another problem of this kind would only be counted."""
@@ -98,6 +94,32 @@ class Notes:
     def warnings(self) -> tuple[Problem, ...]:
         """Warnings in file, row and column order."""
         return _listed(self._warnings)
+
+
+@dataclass(frozen=True)
+class Spot:
+    """A place in a file where something is noted."""
+
+    notes: Notes
+    file: str
+    row: int = 0
+    column: str = ""
+
+    def error(self, kind: str, what: str, remedy: str) -> None:
+        """Record something here that must be mended before anything is computed."""
+        self.notes.error(
+            kind, Problem(plain(self.file), self.row, plain(self.column), what, remedy)
+        )
+
+    def warn(self, kind: str, what: str, remedy: str) -> None:
+        """Record something here that is worth knowing."""
+        self.notes.warn(kind, Problem(plain(self.file), self.row, plain(self.column), what, remedy))
+
+
+def plain(text: str) -> str:
+    """A file or column name fit for a message: invisible characters replaced, and not too long."""
+    cut = text[:100]
+    return cut if cut.isprintable() else "".join(c if c.isprintable() else "?" for c in cut)
 
 
 def _drop_on(piles: dict[tuple[str, str, str], _Pile], kind: str, problem: Problem) -> None:

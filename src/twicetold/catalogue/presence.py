@@ -16,7 +16,7 @@ import scipy.sparse as sp
 from twicetold.catalogue import limits
 from twicetold.catalogue.attestations import STAR, CellLog, StateArray
 from twicetold.catalogue.model import BoolArray, CellState, IntArray
-from twicetold.catalogue.notes import Notes
+from twicetold.catalogue.notes import Notes, Spot
 
 _STRENGTH = np.array([0, 2, 3, 1], dtype=np.int8)  # by CellState: which of two records counts
 
@@ -106,20 +106,16 @@ def _say_duplicates(
     for k in np.argsort(rows, kind="stable").tolist():
         row, first = int(rows[k]), int(firsts[k])
         if differs[k]:
-            notes.error(
+            Spot(notes, file, row=row).error(
                 "contradicting attestations",
                 f"says of the same motif and tradition something else than row {first}.",
                 "Keep the row that is right.",
-                file=file,
-                row=row,
             )
         else:
-            notes.warn(
+            Spot(notes, file, row=row).warn(
                 "duplicate attestation",
                 f"repeats row {first}; it counts once.",
                 "Remove one of the rows.",
-                file=file,
-                row=row,
             )
 
 
@@ -127,12 +123,10 @@ def _warn_contradictions(
     file: str, rows: IntArray, firsts: IntArray, differs: BoolArray, notes: Notes
 ) -> None:
     for k in np.flatnonzero(differs).tolist():
-        notes.warn(
+        Spot(notes, file, row=int(rows[k])).warn(
             "contradicting values",
             f"says of the same motif and tradition something else than row {int(firsts[k])}.",
             "An attestation counts over an absence; mend the dataset to have it otherwise.",
-            file=file,
-            row=int(rows[k]),
         )
 
 
@@ -183,18 +177,18 @@ def build_presence(
         here = slice(edges[k], edges[k + 1])
         mask = listed.mask(k, n, searched)
         if mask is not None:
-            _check_listed(mask, tradition[here], state[here], row[here], file, notes)
+            found = Cells(motif[here], tradition[here], state[here], row[here])
+            _check_listed(mask, found, file, notes)
         else:
             mask = np.full(n, searched)
         _apply(mask, tradition[here], state[here])
         of[k] = sets.code(mask)
         if sets.too_many:
-            notes.error(
+            Spot(notes, file).error(
                 "too many surveyed sets",
                 f"the sets of traditions searched need more than "
                 f"{limits.SURVEYED_BYTES // limits.MEBIBYTE:,} MiB.",
                 "Give fewer distinct sets, or split the catalogue.",
-                file=file,
             )
             break
     return Presence(
@@ -211,23 +205,14 @@ def _apply(mask: BoolArray, tradition: IntArray, state: StateArray) -> None:
     mask[tradition[(state == CellState.NOT_SEARCHED) | (state == CellState.NOT_APPLICABLE)]] = False
 
 
-def _check_listed(
-    mask: BoolArray,
-    tradition: IntArray,
-    state: StateArray,
-    row: IntArray,
-    file: str,
-    notes: Notes,
-) -> None:
-    explicit = (state == CellState.ATTESTED) | (state == CellState.ABSENT)
-    for k in np.flatnonzero(explicit & ~mask[tradition]).tolist():
-        notes.error(
+def _check_listed(mask: BoolArray, cells: Cells, file: str, notes: Notes) -> None:
+    explicit = (cells.state == CellState.ATTESTED) | (cells.state == CellState.ABSENT)
+    for k in np.flatnonzero(explicit & ~mask[cells.tradition]).tolist():
+        Spot(notes, file, row=int(cells.row[k])).error(
             "attested but not surveyed",
             "records a tradition that the surveyed table does not list for this motif.",
             "Add the pair to the surveyed table, or take the row out: chance finds outside the "
             "survey would bias the test.",
-            file=file,
-            row=int(row[k]),
         )
 
 

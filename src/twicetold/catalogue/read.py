@@ -24,7 +24,7 @@ from twicetold.catalogue.freeze import freeze
 from twicetold.catalogue.matrix import read_matrix
 from twicetold.catalogue.model import Catalogue, IntArray, SourceFile
 from twicetold.catalogue.motifs import MotifRows, read_motifs
-from twicetold.catalogue.notes import Notes
+from twicetold.catalogue.notes import Notes, Spot
 from twicetold.catalogue.presence import Presence, build_presence, settle_duplicates
 from twicetold.catalogue.rules import CatalogueRules
 from twicetold.catalogue.tables import Table
@@ -93,18 +93,16 @@ def check_catalogue(
     try:
         catalogue = _read(where, rules or CatalogueRules(), notes)
     except MemoryError:
-        notes.error(
+        Spot(notes, where.name).error(
             "too large",
             "does not fit into memory.",
             "Give it as an attestations table, or use a larger machine.",
-            file=where.name,
         )
     except Exception as exc:  # a fault of ours must not show rows that may be protected
-        notes.error(
+        Spot(notes, where.name or str(where)).error(
             "unreadable",
             f"could not be read ({type(exc).__name__}).",
             "Check that the files are complete and may be read; save them again if need be.",
-            file=where.name or str(where),
         )
     if catalogue is None or notes.broken:
         return None, notes.errors()
@@ -144,22 +142,22 @@ def _read_tables(
     if not _has_tables(name, tables, notes):
         return None
     table = tables["traditions"]
-    columns = find_columns(table, TRADITION_PARTS, ("id", "latitude", "longitude"), notes)
+    columns = find_columns(table, TRADITION_PARTS, ("id", "latitude", "longitude"))
     if columns is None:
         return None
-    asked_columns(table, columns, {part: rules.column(part) for part in _ASKED}, notes)
-    traditions = read_traditions(table, columns, rules, notes)
-    motifs = _motifs(tables.get("motifs"), rules, notes)
+    asked_columns(table, columns, {part: rules.column(part) for part in _ASKED})
+    traditions = read_traditions(table, columns, rules)
+    motifs = _motifs(tables.get("motifs"), rules)
     if traditions is None or motifs is None:
         return None
     presence = (
-        read_matrix(tables["matrix"], traditions, motifs, notes)
+        read_matrix(tables["matrix"], traditions, motifs)
         if "matrix" in tables
         else _presence(tables, traditions, motifs, rules, notes)
     )
     contacts = None
     if "contacts" in tables:
-        contacts = read_contacts(tables["contacts"], CONTACT_PARTS, traditions, notes)
+        contacts = read_contacts(tables["contacts"], CONTACT_PARTS, traditions)
     if presence is None:
         return None
     file = tables["matrix" if "matrix" in tables else "attestations"].file
@@ -171,35 +169,30 @@ def _has_tables(name: str, tables: dict[str, Table], notes: Notes) -> bool:
         if wanted in tables or (wanted == "attestations" and "matrix" in tables):
             continue
         other = " (or a matrix)" if wanted == "attestations" else ""
-        notes.error(
+        Spot(notes, name).error(
             "missing table",
             f"has no table {wanted!r}{other}.",
             f"Add {wanted}.csv, or a sheet called {wanted}.",
-            file=name,
         )
     if "attestations" in tables and "matrix" in tables:
-        notes.error(
-            "two tables",
-            "has both attestations and a matrix.",
-            "Keep one of them.",
-            file=name,
+        Spot(notes, name).error(
+            "two tables", "has both attestations and a matrix.", "Keep one of them."
         )
     for key, table in tables.items():
         if not table.header and key in ("traditions", "motifs", "attestations", "matrix"):
-            notes.error(
+            table.spot().error(
                 "empty table",
                 "is empty.",
                 "Put the column names in the first row and the data below.",
-                file=table.file,
             )
     return not notes.broken
 
 
-def _motifs(table: Table | None, rules: CatalogueRules, notes: Notes) -> MotifRows | None:
+def _motifs(table: Table | None, rules: CatalogueRules) -> MotifRows | None:
     if table is None:
         return MotifRows()
-    columns = find_columns(table, MOTIF_PARTS, ("id",), notes)
-    return None if columns is None else read_motifs(table, columns, rules, notes)
+    columns = find_columns(table, MOTIF_PARTS, ("id",))
+    return None if columns is None else read_motifs(table, columns, rules)
 
 
 def _presence(
@@ -210,23 +203,20 @@ def _presence(
     notes: Notes,
 ) -> Presence | None:
     table = tables["attestations"]
-    columns = find_columns(table, ATTESTATION_PARTS, ("motif", "tradition"), notes)
+    columns = find_columns(table, ATTESTATION_PARTS, ("motif", "tradition"))
     if columns is None:
         return None
-    interpret = state_column(table, columns["state"], notes) if "state" in columns else None
-    log = read_pairs(table, columns, traditions, motifs, notes, interpret=interpret)
+    interpret = state_column(table, columns["state"]) if "state" in columns else None
+    log = read_pairs(table, columns, traditions, motifs, interpret=interpret)
     surveyed: CellLog | None = None
     if "surveyed" in tables:
         listing = tables["surveyed"]
-        found = find_columns(listing, SURVEYED_PARTS, ("motif", "tradition"), notes)
+        found = find_columns(listing, SURVEYED_PARTS, ("motif", "tradition"))
         if found is not None:
-            surveyed = read_pairs(listing, found, traditions, motifs, notes, star=True)
+            surveyed = read_pairs(listing, found, traditions, motifs, star=True)
     if not log.motif and not notes.broken:
-        notes.error(
-            "no attestations",
-            "has no rows.",
-            "List the records, one motif and tradition a row.",
-            file=table.file,
+        table.spot().error(
+            "no attestations", "has no rows.", "List the records, one motif and tradition a row."
         )
         return None
     return build_presence(
@@ -255,8 +245,8 @@ def _read_cldf(
     if columns is None or notes.broken:
         return None
     languages = dataset.tables["LanguageTable"].table
-    asked_columns(languages, columns, {part: rules.column(part) for part in _ASKED}, notes)
-    traditions = read_traditions(languages, columns, rules, notes)
+    asked_columns(languages, columns, {part: rules.column(part) for part in _ASKED})
+    traditions = read_traditions(languages, columns, rules)
     motifs = _parameters(dataset, rules, notes)
     if traditions is None or motifs is None:
         return None
@@ -266,9 +256,9 @@ def _read_cldf(
         "motif": values.properties["parameterReference"],
         "tradition": values.properties["languageReference"],
     }
-    reader = value_reader(values, dataset.tables.get("CodeTable"))
-    log = read_pairs(values.table, pair, traditions, motifs, notes, interpret=reader.interpret)
-    judge(reader, log, motifs, rules, notes)
+    reader = value_reader(values, dataset.tables.get("CodeTable"), motifs)
+    log = read_pairs(values.table, pair, traditions, motifs, interpret=reader.interpret)
+    judge(reader, log, rules)
     presence = build_presence(
         settle_duplicates(log, notes, lenient=True),
         None,
@@ -304,11 +294,10 @@ def _language_columns(languages: CldfTable, notes: Notes) -> dict[str, int] | No
 
 
 def _say_no_property(table: Table, missing: list[str], notes: Notes) -> None:
-    notes.error(
+    table.spot().error(
         "missing column",
         f"has no column with the property {' or '.join(missing)}.",
         "Describe the columns with their CLDF propertyUrl in the metadata file.",
-        file=table.file,
     )
 
 
@@ -326,4 +315,4 @@ def _parameters(dataset: CldfDataset, rules: CatalogueRules, notes: Notes) -> Mo
         at = parameters.named(part)
         if at is not None:
             columns[part] = at
-    return read_motifs(parameters.table, columns, rules, notes)
+    return read_motifs(parameters.table, columns, rules)

@@ -15,7 +15,7 @@ import numpy as np
 
 from twicetold.catalogue import limits
 from twicetold.catalogue.model import IntArray, SourceFile
-from twicetold.catalogue.notes import Notes, shown
+from twicetold.catalogue.notes import Notes, Spot
 
 _BLOCK = limits.MEBIBYTE
 Opener = Callable[[], BinaryIO]
@@ -47,6 +47,10 @@ class Table:
     separators: dict[int, str] = field(default_factory=dict)
     ragged: list[list[str]] = field(default_factory=list)
 
+    def spot(self, row: int = 0, at: int = -1, column: str = "") -> Spot:
+        """The place of a row, and of a column by its index or name, for a note."""
+        return Spot(self.notes, self.file, row, self.header[at] if at >= 0 else column)
+
     def chunks(self, size: int = limits.CHUNK_ROWS) -> Iterator[Chunk]:
         """Rows that fit the header, in order; blank rows are passed over, ragged ones noted."""
         width = len(self.header)
@@ -57,11 +61,10 @@ class Table:
             rows = np.arange(row, row + len(block), dtype=np.int32)
             row += len(block)
             if row > limits.TABLE_ROWS:
-                self.notes.error(
+                self.spot().error(
                     "too many rows",
                     f"has more than {limits.TABLE_ROWS:,} rows.",
                     "Split the catalogue, or drop rows that are not needed.",
-                    file=self.file,
                 )
                 return
             if set(map(len, block)) != {width} or not all(map(any, block)):
@@ -81,13 +84,11 @@ class Table:
                 record = record[:width]  # noqa: PLW2901 - trailing blanks carry nothing
             if len(record) != width:
                 self.ragged.append([cell[: limits.ID_CHARS] for cell in record[:width]])
-                self.notes.error(
+                self.spot(number).error(
                     "ragged row",
                     f"has {len(record)} cells where the header has {width}.",
                     "Give the row one cell per column; put quotes around cells that hold the "
                     "separator.",
-                    file=self.file,
-                    row=number,
                 )
                 continue
             kept.append(record)
@@ -156,38 +157,30 @@ def open_table(
 def check_header(header: tuple[str, ...], file: str, row: int, notes: Notes) -> bool:
     """Whether the column names can be told apart; says so when not."""
     if len(header) > limits.TABLE_COLUMNS:
-        notes.error(
+        Spot(notes, file, row=row).error(
             "too many columns",
             f"has {len(header):,} columns, more than {limits.TABLE_COLUMNS:,}.",
             "Give long tables as one row per motif and tradition.",
-            file=file,
-            row=row,
         )
         return False
-    seen: dict[str, str] = {}
+    seen: dict[str, int] = {}
     good = True
-    for name in header:
-        key = name.casefold()
-        if key and key in seen:
-            notes.error(
+    for place, name in enumerate(header, start=1):
+        if name and name in seen:
+            # The name is not repeated here: in a wide matrix it may be a protected id.
+            Spot(notes, file, row).error(
                 "repeated column",
-                f"two columns are called {shown(name)}.",
+                f"columns {seen[name]} and {place} have the same name.",
                 "Rename or remove one of them.",
-                file=file,
-                row=row,
-                column=name[:60],
             )
             good = False
-        seen[key] = name
+        seen.setdefault(name, place)
     return good
 
 
 def _say_empty(file: str, notes: Notes) -> None:
-    notes.error(
-        "empty table",
-        "is empty.",
-        "Put the column names in the first row and the data below.",
-        file=file,
+    Spot(notes, file).error(
+        "empty table", "is empty.", "Put the column names in the first row and the data below."
     )
 
 
@@ -223,12 +216,10 @@ def _scan(
             if not block:
                 break
             if encoding == "utf-8" and (nul := block.find(b"\x00")) >= 0:
-                notes.error(
+                Spot(notes, file, row=lines + 1 + block.count(b"\n", 0, nul)).error(
                     "NUL byte",
                     f"holds a NUL byte (byte {size + nul + 1:,}), which no text table has.",
                     "Save the table again as CSV UTF-8; the file may be damaged or not a table.",
-                    file=file,
-                    row=lines + 1 + block.count(b"\n", 0, nul),
                 )
                 return None
             digest.update(block)
@@ -248,30 +239,25 @@ def _scan(
 
 
 def _say_encoding(file: str, notes: Notes, *, row: int, offset: int, byte: int, guess: str) -> None:
-    notes.error(
+    Spot(notes, file, row=row).error(
         "not UTF-8",
         f"is not UTF-8: byte {offset + 1:,} of the file is 0x{byte:02X} (probably {guess}).",
         "Save it as 'CSV UTF-8' in the spreadsheet, or convert its encoding to UTF-8.",
-        file=file,
-        row=row,
     )
 
 
 def _say_too_large(file: str, notes: Notes, whole: bool, row: int) -> None:
     if whole:
-        notes.error(
+        Spot(notes, file).error(
             "too large",
             f"is larger than {limits.TABLE_BYTES // limits.MEBIBYTE:,} MiB.",
             "Drop columns that are not needed, or split the catalogue.",
-            file=file,
         )
         return
-    notes.error(
+    Spot(notes, file, row=row).error(
         "line too long",
         f"has a line longer than {limits.LINE_BYTES // limits.MEBIBYTE} MiB.",
         "Check that the file is a table with one row a line.",
-        file=file,
-        row=row,
     )
 
 
@@ -321,18 +307,14 @@ def _records(
 
 def _say_broken(file: str, notes: Notes, row: int, reason: str) -> None:
     if "field larger" in reason:
-        notes.error(
+        Spot(notes, file, row=row).error(
             "cell too long",
             "has a cell too long for a table, or a quotation mark that is never closed.",
             "Look for a lone quotation mark in this row, or shorten the cell.",
-            file=file,
-            row=row,
         )
         return
-    notes.error(
+    Spot(notes, file, row=row).error(
         "broken quotes",
         "has a quotation mark that does not close before the next separator.",
         'Double the quotation marks inside quoted cells ("") or take them out.',
-        file=file,
-        row=row,
     )

@@ -19,7 +19,7 @@ from twicetold.catalogue.cells import (
 )
 from twicetold.catalogue.columns import Columns, misspelt_access, row_access, unnamed_access
 from twicetold.catalogue.model import FloatArray
-from twicetold.catalogue.notes import Notes, shown, suggestion
+from twicetold.catalogue.notes import Spot, shown, suggestion
 from twicetold.catalogue.rules import CatalogueRules
 from twicetold.catalogue.tables import Table
 
@@ -69,11 +69,9 @@ class TraditionRows:
         return [t.tradition_id for t in self.located + self.unlocated if t.access == "open"]
 
 
-def read_traditions(
-    table: Table, columns: Columns, rules: CatalogueRules, notes: Notes
-) -> TraditionRows | None:
+def read_traditions(table: Table, columns: Columns, rules: CatalogueRules) -> TraditionRows | None:
     """Read and check the traditions table; None when it cannot be used at all."""
-    if misspelt_access(table, columns, notes):
+    if misspelt_access(table, columns):
         return None
     out = TraditionRows(table.file)
     hidden: set[str] = set()
@@ -81,11 +79,11 @@ def read_traditions(
     used = set(columns.values())
     spare = [k for k, name in enumerate(table.header) if k not in used and name]
     for chunk in table.chunks():
-        if unnamed_access(table, chunk, columns, notes):
+        if unnamed_access(table, chunk, columns):
             return None
         marks = chunk.columns[columns["access"]] if "access" in columns else None
         for k, row in enumerate(chunk.rows.tolist()):
-            access = row_access(table, columns, marks, k, row, notes)
+            access = row_access(table, columns, marks, k, row)
             identity = chunk.columns[columns["id"]][k].strip()
             if access == "withheld" or (access == "restricted" and not rules.restricted):
                 out.withheld += access == "withheld"
@@ -96,71 +94,70 @@ def read_traditions(
                 out.withdrawn += 1
                 hidden.add(identity)
                 continue
-            cells = [column[k] for column in chunk.columns]
-            found = _read_row(table, columns, spare, cells, row, access, notes)
+            cells = _Cells(table, columns, [column[k] for column in chunk.columns], row)
+            found = _read_row(cells, spare, access)
             if found is None:
                 hidden.add(identity)
             elif found.tradition_id in kept:
-                _say_repeated(table, columns, row, kept[found.tradition_id], notes)
+                _say_repeated(table, columns, row, kept[found.tradition_id])
             else:
                 kept[found.tradition_id] = found
     at = columns["id"]
     hidden.update(cells[at].strip() for cells in table.ragged if len(cells) > at)
-    _settle(out, kept, hidden, table, columns, notes)
-    _numbers(out, table, columns, spare, notes)
-    _check_withdrawn(out, rules, hidden, notes)
+    _settle(out, kept, hidden, table, columns)
+    _numbers(out, table, columns, spare)
+    _check_withdrawn(out, table, rules, hidden)
     return out
 
 
-def _read_row(
-    table: Table,
-    columns: Columns,
-    spare: list[int],
-    cells: list[str],
-    row: int,
-    access: str,
-    notes: Notes,
-) -> Tradition | None:
-    def named(part: str) -> str:
-        return table.header[columns[part]]
+@dataclass(frozen=True)
+class _Cells:
+    """The cells of one row, asked for by the part they play."""
 
-    def text(part: str) -> str:
-        if part not in columns:
+    table: Table
+    columns: Columns
+    cells: list[str]
+    row: int
+
+    def spot(self, part: str) -> Spot:
+        return self.table.spot(self.row, self.columns[part])
+
+    def text(self, part: str) -> str:
+        """A checked text cell; blank where the column or the value is missing."""
+        at = self.columns.get(part, -1)
+        if at < 0 or self.cells[at] in self.table.nulls.get(at, ()):
             return ""
-        raw = cells[columns[part]]
-        if raw in table.nulls.get(columns[part], ()):
-            return ""
-        out = clean_text(raw, notes, file=table.file, row=row, column=named(part))
-        warn_formula(out, notes, file=table.file, row=row, column=named(part))
+        out = clean_text(self.cells[at], self.spot(part))
+        warn_formula(out, self.spot(part))
         return out
 
-    identity = clean_id(cells[columns["id"]], notes, file=table.file, row=row, column=named("id"))
+
+def _read_row(cells: _Cells, spare: list[int], access: str) -> Tradition | None:
+    identity = clean_id(cells.cells[cells.columns["id"]], cells.spot("id"))
     if not identity:
         return None
-    warn_formula(identity, notes, file=table.file, row=row, column=named("id"))
-    point = _coordinates(table, columns, cells, row, notes)
+    warn_formula(identity, cells.spot("id"))
+    point = _coordinates(cells.table, cells.columns, cells.cells, cells.row)
     if point is None:
         return None
-    effort = cells[columns["effort"]].strip() if "effort" in columns else ""
-    label = text("label")
     return Tradition(
-        row=row,
+        row=cells.row,
         tradition_id=identity,
-        name=text("name") or identity,
+        name=cells.text("name") or identity,
         latitude=point[0],
         longitude=point[1],
         access=access,
-        family=optional_text(text("family")),
-        branch=optional_text(text("branch")),
-        region=optional_text(text("region")),
-        effort=effort,
-        labels=tuple(x.strip() for x in label.split("|") if x.strip()),
-        extra=tuple(cells[k].strip() for k in spare),
+        family=optional_text(cells.text("family")),
+        branch=optional_text(cells.text("branch")),
+        region=optional_text(cells.text("region")),
+        effort=cells.cells[cells.columns["effort"]].strip() if "effort" in cells.columns else "",
+        labels=tuple(x.strip() for x in cells.text("label").split("|") if x.strip()),
+        extra=tuple(cells.cells[k].strip() for k in spare),
     )
 
 
 def _coordinates(
-    table: Table, columns: Columns, cells: list[str], row: int, notes: Notes
+    table: Table, columns: Columns, cells: list[str], row: int
 ) -> tuple[float, float] | None:
     """Latitude and longitude; NaN twice when both are blank; None when faulty."""
     values: dict[str, float] = {}
@@ -169,83 +166,64 @@ def _coordinates(
         raw = cells[at].strip()
         if raw in MISSING or raw in table.nulls.get(at, ()):
             continue
-        values[part] = check_number(raw, notes, file=table.file, row=row, column=table.header[at])
+        values[part] = check_number(raw, table.spot(row, at))
     if not values:
         return math.nan, math.nan
     if len(values) == 1:
         have = next(iter(values))
         lacks = "longitude" if have == "latitude" else "latitude"
-        notes.error(
+        table.spot(row, columns[lacks]).error(
             "half a coordinate",
             f"has a {have} but no {lacks}.",
             "Give both, or leave both blank to list the tradition without a place.",
-            file=table.file,
-            row=row,
-            column=table.header[columns[lacks]],
         )
         return None
     latitude, longitude = values["latitude"], values["longitude"]
     if math.isnan(latitude) or math.isnan(longitude):
         return None
-    if not _in_range(table, columns, row, latitude, longitude, notes):
+    if not _in_range(table, columns, row, latitude, longitude):
         return None
     if latitude == 0 and longitude == 0:
-        notes.warn(
+        table.spot(row).warn(
             "point 0/0",
             "stands at latitude 0, longitude 0, which usually marks a missing place.",
             "Check it; leave both cells blank if the place is not known.",
-            file=table.file,
-            row=row,
         )
     return latitude, longitude
 
 
-def _in_range(
-    table: Table, columns: Columns, row: int, latitude: float, longitude: float, notes: Notes
-) -> bool:
+def _in_range(table: Table, columns: Columns, row: int, latitude: float, longitude: float) -> bool:
     if abs(latitude) <= 90 and abs(longitude) <= 180:
         return True
     if 90 < abs(latitude) <= 180 and abs(longitude) <= 90:
-        notes.error(
+        table.spot(row, columns["latitude"]).error(
             "swapped coordinates",
             f"latitude {latitude:g} and longitude {longitude:g} look swapped.",
             "Exchange the two cells (latitude runs from -90 to 90).",
-            file=table.file,
-            row=row,
-            column=table.header[columns["latitude"]],
         )
         return False
     if abs(latitude) > 90:
-        notes.error(
+        table.spot(row, columns["latitude"]).error(
             "latitude out of range",
             f"latitude {latitude:g} lies outside -90 to 90.",
             "Give decimal degrees; check for a lost decimal point.",
-            file=table.file,
-            row=row,
-            column=table.header[columns["latitude"]],
         )
     if abs(longitude) > 180:
         east = f"{longitude - 360:g}" if 180 < longitude <= 360 else ""
-        notes.error(
+        table.spot(row, columns["longitude"]).error(
             "longitude out of range",
             f"longitude {longitude:g} lies outside -180 to 180.",
             f"Write {east}." if east else "Give decimal degrees; check for a lost decimal point.",
-            file=table.file,
-            row=row,
-            column=table.header[columns["longitude"]],
         )
     return False
 
 
-def _say_repeated(table: Table, columns: Columns, row: int, first: Tradition, notes: Notes) -> None:
+def _say_repeated(table: Table, columns: Columns, row: int, first: Tradition) -> None:
     name = shown(first.tradition_id) if first.access == "open" else "of a restricted row"
-    notes.error(
+    table.spot(row, columns["id"]).error(
         "repeated tradition",
         f"the id {name} already stands in row {first.row}.",
         "Give each tradition one row and its own id.",
-        file=table.file,
-        row=row,
-        column=table.header[columns["id"]],
     )
 
 
@@ -255,18 +233,14 @@ def _settle(
     hidden: set[str],
     table: Table,
     columns: Columns,
-    notes: Notes,
 ) -> None:
     """Sort by id, so that the order of rows never matters, and give out the codes."""
     for key in sorted(kept):
         if key in hidden:
-            notes.error(
+            table.spot(kept[key].row, columns["id"]).error(
                 "repeated tradition",
                 "its id stands in more than one row of the table.",
                 "Give each tradition one row and its own id.",
-                file=table.file,
-                row=kept[key].row,
-                column=table.header[columns["id"]],
             )
         elif math.isnan(kept[key].latitude):
             out.unlocated.append(kept[key])
@@ -275,51 +249,45 @@ def _settle(
     out.index = dict.fromkeys(hidden, HIDDEN)
     for code, tradition in enumerate(out.located + out.unlocated):
         out.index[tradition.tradition_id] = code
-    _warn_same_place(out, notes)
-    _check_enough(out, notes)
+    _warn_same_place(out, table)
+    _check_enough(out, table)
 
 
-def _warn_same_place(out: TraditionRows, notes: Notes) -> None:
+def _warn_same_place(out: TraditionRows, table: Table) -> None:
     places: dict[tuple[float, float], Tradition] = {}
     for tradition in sorted(out.located, key=lambda t: t.row):
         point = (tradition.latitude, (tradition.longitude + 180.0) % 360.0)
         first = places.setdefault(point, tradition)
         if first is not tradition:
-            notes.warn(
+            table.spot(tradition.row).warn(
                 "same place",
                 f"stands at the same point as row {first.row}; such ties are ordered by id.",
                 "Give each tradition its own place if you can.",
-                file=out.file,
-                row=tradition.row,
             )
 
 
-def _check_enough(out: TraditionRows, notes: Notes) -> None:
+def _check_enough(out: TraditionRows, table: Table) -> None:
     n = len(out.located)
     if n < 2:
         some = "No tradition has" if n == 0 else "Only one tradition has"
-        notes.error(
+        table.spot().error(
             "too few traditions",
             f"{some} coordinates and may enter.",
             "Give latitude and longitude for at least two traditions at different places.",
-            file=out.file,
         )
         return
     first = out.located[0]
     if all((t.latitude, t.longitude) == (first.latitude, first.longitude) for t in out.located):
-        notes.error(
+        table.spot().error(
             "one place",
             f"all {n:,} located traditions stand at one point.",
             "Give each its own coordinates; geography cannot be tested otherwise.",
-            file=out.file,
         )
 
 
-def _numbers(
-    out: TraditionRows, table: Table, columns: Columns, spare: list[int], notes: Notes
-) -> None:
+def _numbers(out: TraditionRows, table: Table, columns: Columns, spare: list[int]) -> None:
     if "effort" in columns:
-        out.effort = _effort(out, table, columns["effort"], notes)
+        out.effort = _effort(out, table, columns["effort"])
     for k, at in enumerate(spare):
         cells = [t.extra[k] for t in out.located]
         nulls = MISSING | table.nulls.get(at, frozenset())
@@ -328,13 +296,10 @@ def _numbers(
         if not given or len(odd) * 2 > len(given):
             continue
         if odd:
-            notes.warn(
+            table.spot(odd[0][0], at).warn(
                 "covariate left out",
                 f"is a number in most rows but {shown(odd[0][1])} here; the column is left out.",
                 "Correct the cell to use the column as a covariate.",
-                file=table.file,
-                row=odd[0][0],
-                column=table.header[at],
             )
             continue
         out.covariates[table.header[at]] = np.array(
@@ -342,54 +307,43 @@ def _numbers(
         )
 
 
-def _effort(out: TraditionRows, table: Table, at: int, notes: Notes) -> FloatArray | None:
+def _effort(out: TraditionRows, table: Table, at: int) -> FloatArray | None:
     column = table.header[at]
     nulls = MISSING | table.nulls.get(at, frozenset())
     if all(t.effort in nulls for t in out.located):
-        notes.warn(
+        table.spot(0, column=column).warn(
             "effort blank",
             "the effort column is blank, so there is no effort.",
             "Fill it in to allow for how much was collected.",
-            file=table.file,
-            column=column,
         )
         return None
     values = np.empty(len(out.located))
     for k, tradition in enumerate(out.located):
         if tradition.effort in nulls:
-            notes.error(
+            table.spot(tradition.row, column=column).error(
                 "effort missing",
                 "has no effort, though other traditions have.",
                 "Estimate it (any unit, greater than 0), or remove the column.",
-                file=table.file,
-                row=tradition.row,
-                column=column,
             )
             continue
-        values[k] = check_number(
-            tradition.effort, notes, file=table.file, row=tradition.row, column=column
-        )
+        values[k] = check_number(tradition.effort, table.spot(tradition.row, column=column))
         if values[k] <= 0:
-            notes.error(
+            table.spot(tradition.row, column=column).error(
                 "effort not positive",
                 f"effort must be greater than 0, got {tradition.effort}.",
                 "Give a positive amount; a tradition never searched should be left out.",
-                file=table.file,
-                row=tradition.row,
-                column=column,
             )
     return values
 
 
 def _check_withdrawn(
-    out: TraditionRows, rules: CatalogueRules, hidden: set[str], notes: Notes
+    out: TraditionRows, table: Table, rules: CatalogueRules, hidden: set[str]
 ) -> None:
     for identity in _unknown(rules, out, hidden):
-        notes.error(
+        table.spot().error(
             "unknown tradition",
             f"no tradition has the id {shown(identity)}, which the plan withdraws.",
             f"Correct the plan.{suggestion(identity, out.public_ids)}",
-            file=out.file,
         )
 
 

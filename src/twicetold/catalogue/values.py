@@ -17,7 +17,7 @@ from twicetold.catalogue.attestations import CellLog, StateArray
 from twicetold.catalogue.cldf import CldfTable
 from twicetold.catalogue.model import CellState
 from twicetold.catalogue.motifs import MotifRows
-from twicetold.catalogue.notes import Notes, shown, suggestion
+from twicetold.catalogue.notes import shown, suggestion
 from twicetold.catalogue.rules import CatalogueRules
 from twicetold.catalogue.tables import Chunk
 
@@ -42,6 +42,7 @@ class ValueReader:
     """Gives each row the number of its (value, code) pair; the pairs are judged afterwards."""
 
     values: CldfTable
+    motifs: MotifRows
     codes: dict[str, str] = field(default_factory=dict)
     offered: dict[str, set[str]] = field(default_factory=dict)
     pairs: dict[tuple[str, str], int] = field(default_factory=dict)
@@ -64,9 +65,9 @@ class ValueReader:
         return np.zeros(len(good), dtype=np.int8)
 
 
-def value_reader(values: CldfTable, table: CldfTable | None) -> ValueReader:
+def value_reader(values: CldfTable, table: CldfTable | None, motifs: MotifRows) -> ValueReader:
     """A reader that knows the names of the codes, where the dataset has a code table."""
-    reader = ValueReader(values)
+    reader = ValueReader(values, motifs)
     if table is None or "id" not in table.properties:
         return reader
     name = table.properties.get("name", table.properties["id"])
@@ -80,9 +81,7 @@ def value_reader(values: CldfTable, table: CldfTable | None) -> ValueReader:
     return reader
 
 
-def judge(
-    reader: ValueReader, log: CellLog, motifs: MotifRows, rules: CatalogueRules, notes: Notes
-) -> None:
+def judge(reader: ValueReader, log: CellLog, rules: CatalogueRules) -> None:
     """Replace the states of the log by what the presence rule makes of each row's value."""
     if not reader.numbers:
         return
@@ -96,15 +95,15 @@ def judge(
         by_motif.setdefault(combo // wide, []).append(k)
     state = np.zeros(len(combos), dtype=np.int8)
     listed = {} if isinstance(rules.presence, str) else rules.presence
-    file = reader.values.table.file
-    _check_named(listed, motifs, file, notes)
+    motifs = reader.motifs
+    _check_named(listed, reader)
     for code, places in by_motif.items():
         found = [texts[int(combos[k]) % wide] for k in places]
         wanted = listed.get(motifs.ids[code], listed.get(OTHER))
         states = (
-            _by_default(reader, found, motifs, code, notes)
+            _by_default(reader, found, code)
             if wanted is None
-            else _by_list(reader, found, wanted, motifs, code, notes)
+            else _by_list(reader, found, wanted, code)
         )
         state[places] = states
     log.state[:] = [state[where]]
@@ -139,26 +138,22 @@ def _negatives(words: list[set[str]], offered: set[str]) -> set[str]:
     return set()
 
 
-def _by_default(
-    reader: ValueReader, found: list[tuple[str, str]], motifs: MotifRows, code: int, notes: Notes
-) -> list[int]:
+def _by_default(reader: ValueReader, found: list[tuple[str, str]], code: int) -> list[int]:
     said = [{w.casefold() for w in _parts(reader, value)} for value, _ in found]
     named = [
         {reader.codes[c].strip().casefold()} if s and c in reader.codes else s
         for s, (_, c) in zip(said, found, strict=True)
     ]
-    offered = {w.casefold() for w in reader.offered.get(motifs.ids[code], ())}
+    offered = {w.casefold() for w in reader.offered.get(reader.motifs.ids[code], ())}
     for words in (said, named):
         negative = _negatives(words, offered)
         if negative:
             _warn(
-                "yes/no parameter",
-                motifs,
+                reader,
                 code,
+                "yes/no parameter",
                 "has yes/no values; the negatives are read as searched and absent.",
                 "Set `presence` in the plan to have it otherwise.",
-                reader,
-                notes,
             )
             return [
                 CellState.NOT_SEARCHED
@@ -168,37 +163,28 @@ def _by_default(
             ]
     if any(w & SOUNDS_NEGATIVE for w in (*said, *named)):
         _warn(
-            "negative among values",
-            motifs,
+            reader,
             code,
+            "negative among values",
             "has values that sound like an absence among others; all count as attested.",
             "List the values that mean presence under `presence` in the plan.",
-            reader,
-            notes,
         )
     return [CellState.ATTESTED if s else CellState.NOT_SEARCHED for s in said]
 
 
 def _by_list(
-    reader: ValueReader,
-    found: list[tuple[str, str]],
-    wanted: tuple[str, ...],
-    motifs: MotifRows,
-    code: int,
-    notes: Notes,
+    reader: ValueReader, found: list[tuple[str, str]], wanted: tuple[str, ...], code: int
 ) -> list[int]:
     words = [_words(reader, pair) for pair in found]
     met = set().union(*words) if words else set()
     for value in wanted:
-        if value not in met and motifs.access[code] == "open":
+        if value not in met and reader.motifs.access[code] == "open":
             _warn(
-                "value never met",
-                motifs,
+                reader,
                 code,
+                "value never met",
                 f"never has the value {shown(value)} that the plan lists.",
                 f"Correct the plan if it is a slip.{suggestion(value, met)}",
-                reader,
-                notes,
             )
     chosen = set(wanted)
     return [
@@ -209,28 +195,17 @@ def _by_list(
     ]
 
 
-def _warn(
-    kind: str,
-    motifs: MotifRows,
-    code: int,
-    what: str,
-    remedy: str,
-    reader: ValueReader,
-    notes: Notes,
-) -> None:
-    is_open = motifs.access[code] == "open"
-    name = shown(motifs.ids[code]) if is_open else "of restricted access"
-    notes.warn(kind, f"the parameter {name} {what}", remedy, file=reader.values.table.file)
+def _warn(reader: ValueReader, code: int, kind: str, what: str, remedy: str) -> None:
+    is_open = reader.motifs.access[code] == "open"
+    name = shown(reader.motifs.ids[code]) if is_open else "of restricted access"
+    reader.values.table.spot().warn(kind, f"the parameter {name} {what}", remedy)
 
 
-def _check_named(
-    listed: Mapping[str, tuple[str, ...]], motifs: MotifRows, file: str, notes: Notes
-) -> None:
+def _check_named(listed: Mapping[str, tuple[str, ...]], reader: ValueReader) -> None:
     for name in listed:
-        if name != OTHER and name not in motifs.index:
-            notes.error(
+        if name != OTHER and name not in reader.motifs.index:
+            reader.values.table.spot().error(
                 "unknown motif",
                 f"the plan lists values for the parameter {shown(name)}, which is not there.",
-                f"Correct the plan.{suggestion(name, motifs.public_ids)}",
-                file=file,
+                f"Correct the plan.{suggestion(name, reader.motifs.public_ids)}",
             )

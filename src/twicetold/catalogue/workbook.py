@@ -7,13 +7,15 @@ import hashlib
 import re
 import warnings
 import zipfile
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
+from functools import partial
+from itertools import islice
 from pathlib import Path
 from typing import Any
 
 from twicetold.catalogue import limits
 from twicetold.catalogue.model import SourceFile
-from twicetold.catalogue.notes import Notes, shown
+from twicetold.catalogue.notes import Notes, Spot, shown
 from twicetold.catalogue.tables import Table, check_header
 
 _ENCODING = re.compile(rb"""^<\?xml[^>]{0,200}encoding\s*=\s*["']([A-Za-z0-9._-]+)["']""")
@@ -40,11 +42,10 @@ def workbook_tables(path: Path, notes: Notes, sources: list[SourceFile]) -> dict
     for sheet in book.worksheets:
         key = sheet.title.strip().casefold()
         if key in tables:
-            notes.error(
+            Spot(notes, path.name).error(
                 "repeated sheet",
                 f"two sheets are called {shown(sheet.title)}.",
                 "Rename or remove one of them.",
-                file=path.name,
             )
             continue
         table = _sheet_table(sheet, f"{path.name}[{sheet.title[:60]}]", notes)
@@ -61,22 +62,22 @@ def _sheet_table(sheet: Any, file: str, notes: Notes) -> Table | None:
     def records() -> Iterator[list[str]]:
         yield from _rows(sheet, file, notes)
 
-    row = 0
-    for record in records():
-        row += 1
+    for row, record in enumerate(records(), start=1):
         if any(cell.strip() for cell in record):
             header = tuple(cell.strip() for cell in record)
             if not check_header(header, file, row, notes):
                 return None
-            width, start = len(header), row
-
-            def body() -> Iterator[list[str]]:
-                for number, cells in enumerate(records()):
-                    if number >= start:
-                        yield cells + [""] * (width - len(cells)) if cells else cells
-
+            body = partial(_body, records, row, len(header))
             return Table(file, header, row, body, notes)
     return Table(file, (), 0, lambda: iter(()), notes)
+
+
+def _body(
+    records: Callable[[], Iterator[list[str]]], start: int, width: int
+) -> Iterator[list[str]]:
+    """Rows below the header, padded to its width (a sheet does not store trailing blanks)."""
+    for cells in islice(records(), start, None):
+        yield cells + [""] * (width - len(cells)) if cells else cells
 
 
 def _rows(sheet: Any, file: str, notes: Notes) -> Iterator[list[str]]:
@@ -87,11 +88,10 @@ def _rows(sheet: Any, file: str, notes: Notes) -> Iterator[list[str]]:
         for number, values in enumerate(sheet.iter_rows(values_only=True), start=1):
             visited += len(values) + 1
             if number > limits.SHEET_ROWS or visited > limits.SHEET_CELLS:
-                notes.error(
+                Spot(notes, file).error(
                     "sheet too large",
                     "has more rows or cells than a sheet may hold.",
                     "Remove far-off stray cells, or give the tables as CSV.",
-                    file=file,
                 )
                 return
             end = len(values)
@@ -117,7 +117,7 @@ def _text(value: object) -> str:
 
 def _is_safe(path: Path, notes: Notes) -> bool:
     def refuse(kind: str, what: str, remedy: str) -> bool:
-        notes.error(kind, what, remedy, file=path.name)
+        Spot(notes, path.name).error(kind, what, remedy)
         return False
 
     if path.stat().st_size > limits.WORKBOOK_BYTES:
