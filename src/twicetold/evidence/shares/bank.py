@@ -1,0 +1,270 @@
+"""The snapshot bank: walks of the spread chain over the whole simplex of shares, summarised.
+
+Each walk has shares of its own, drawn over the simplex, and keeps one visit for each of a few
+recorded counts spread evenly over their logs. Only summaries, shares and weights are kept: the bank
+holds nothing of any motif, place or name, and serves every motif searched in the same traditions.
+"""
+
+from __future__ import annotations
+
+import dataclasses
+import time
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+
+from twicetold.evidence.shares._kernels import SUMMARIES, unpack_bits
+from twicetold.evidence.shares.cache import Entry, open_entry
+from twicetold.evidence.shares.landscape import Landscape, landscape
+from twicetold.randomness import Stream, chunk_generator, chunk_words
+from twicetold.spread import ChainTables, SpreadError, SpreadModel, cap_for, chain_tables
+from twicetold.spread import walk_chunk as walk
+from twicetold.workers import Pool, ThreadPool
+
+FloatArray = npt.NDArray[np.float64]
+
+#: Walks in one chunk (well under a second at 1,000 traditions).
+CHUNK = 50
+#: Walks of a bank when the caller does not say: 66 share points of 500.
+WALKS = 33_000
+#: Counts a walk keeps a snapshot for.
+KEPT = 12
+#: Fewest holders that are looked at.
+SMALLEST = 2
+#: Part of the walks drawn towards the edges and corners of the simplex, where a flat draw is thin.
+_EDGE = 0.2
+
+
+@dataclass(frozen=True)
+class Bank:
+    """Summaries of snapshots over the simplex of shares. Arrays are read-only.
+
+    Parameters
+    ----------
+    shares : (W, 3) float64
+        Shares of emergence, contact and inheritance of each walk.
+    prior : (W,) float64
+        Flat density over the density the walk's shares were drawn from.
+    counts : (W, K) int32
+        Recorded counts each walk was asked for.
+    weight : (W, K) float64
+        The walk's total weight for the count, times the count (about even over counts); 0 where
+        the walk never visited it.
+    summaries : (W, K, S) float32
+        Columns :data:`SUMMARIES`; zeros where the weight is 0.
+    largest : int
+        Largest count covered.
+    routes : int
+        3, or 2 without families.
+    map : Landscape
+        What summaries of further holder sets need.
+    """
+
+    shares: FloatArray
+    prior: FloatArray
+    counts: npt.NDArray[np.int32]
+    weight: FloatArray
+    summaries: npt.NDArray[np.float32]
+    largest: int
+    routes: int
+    map: Landscape
+    entry: Entry | None = None
+
+    @property
+    def walks(self) -> int:
+        """Number of walks, W."""
+        return len(self.shares)
+
+
+@dataclass(frozen=True)
+class _Shared:
+    tables: ChainTables
+    map: Landscape
+    seed: int
+    largest: int
+    routes: int
+    walks: int
+    entry: Entry | None
+
+
+def build_bank(
+    model: SpreadModel,
+    *,
+    largest: int,
+    seed: int,
+    pool: Pool | None = None,
+    walks: int = WALKS,
+    use_cache: bool = True,
+) -> Bank:
+    """Walk the chain over the whole simplex of shares, or read it from the cache.
+
+    Parameters
+    ----------
+    model : SpreadModel
+        Graph of the surveyed traditions, turnover, families, propensities, recording and reach;
+        its ``shares`` are not looked at.
+    largest : int
+        Largest recorded count to cover: the catalogue's, never a motif's own.
+    seed : int
+    pool : Pool, optional
+        This process's threads by default.
+    walks : int
+        Number of walks.
+    use_cache : bool
+        Whether chunks are read from and kept in the cache. What is finished when a run is
+        interrupted is not walked again.
+
+    Raises
+    ------
+    SpreadError
+        When fewer than two traditions are left or ``largest`` or ``walks`` cannot be used.
+    """
+    shared = _prepare(model, largest=largest, seed=seed, walks=walks, use_cache=use_cache)
+    keys = list(range(-(-walks // CHUNK)))
+    parts = list((pool or ThreadPool()).run(_chunk, shared, keys, label="walking the shares bank"))
+    joined = [np.concatenate([part[k] for part in parts]) for k in range(5)]
+    for array in joined:
+        array.flags.writeable = False
+    if shared.entry is not None:
+        shared.entry.touch()
+    return Bank(*joined, shared.largest, shared.routes, shared.map, shared.entry)
+
+
+def _prepare(
+    model: SpreadModel, *, largest: int, seed: int, walks: int, use_cache: bool
+) -> _Shared:
+    n = model.graph.n
+    if n < 2:
+        raise SpreadError(f"Route shares need at least 2 surveyed traditions, got {n}.")
+    if walks < 1:
+        raise SpreadError(f"`walks` must be a whole number from 1 up, got {walks}.")
+    largest = max(int(largest), min(SMALLEST, n))
+    cap = cap_for(model, largest)
+    place = landscape(model.graph, model.family_codes, model.propensity)
+    routes = 3 if place.families else 2
+    # Any shares with some inheritance: they make the tables hold the families' members.
+    even = (1 / 3, 1 / 3, 1 / 3) if routes == 3 else (0.5, 0.5, 0.0)
+    base = dataclasses.replace(model, shares=even)
+    entry = None
+    if use_cache:
+        entry = open_entry(_what_it_depends_on(base, largest, seed, walks, cap))
+    return _Shared(chain_tables(base, cap), place, seed, largest, routes, walks, entry)
+
+
+def _what_it_depends_on(
+    model: SpreadModel, largest: int, seed: int, walks: int, cap: int
+) -> dict[str, object]:
+    """Everything the bank is made of, for the cache's key."""
+    return {
+        "n": model.graph.n,
+        "edges": model.graph.edges,
+        "family": model.family_codes,
+        "propensity": model.propensity,
+        "recorded": model.recorded,
+        "turnover": model.turnover,
+        "reach": model.reach,
+        "largest": largest,
+        "cap": cap,
+        "seed": seed,
+        "walks": walks,
+        "design": (CHUNK, KEPT, SMALLEST, _EDGE),
+        "summaries": SUMMARIES,
+    }
+
+
+def _chunk(shared: _Shared, key: int) -> tuple[npt.NDArray[np.generic], ...]:
+    """Give one chunk of walks, from the cache when it is there."""
+    name = f"walks-{key:05d}"
+    if shared.entry is not None:
+        found = shared.entry.read(name)
+        if found is not None:
+            return tuple(found[k] for k in ("shares", "prior", "counts", "weight", "summaries"))
+    size = min(CHUNK, shared.walks - key * CHUNK)
+    rng = chunk_generator(shared.seed, Stream.BANK, key, 1)
+    words = chunk_words(shared.seed, Stream.BANK, key, 0, draws=size)
+    shares, prior = draw_shares(rng, size, shared.routes)
+    counts = draw_counts(rng, size, shared.largest)
+    weight = np.zeros(counts.shape)
+    summaries = np.zeros((*counts.shape, len(SUMMARIES)), dtype=np.float32)
+    for w in range(size):
+        tables = dataclasses.replace(shared.tables, shares=shares[w])
+        kept = walk(tables, words[w : w + 1], counts[w])
+        seen = kept.weight[0] > 0.0
+        # E[weight] falls as 1 / n: the product is about even over counts.
+        weight[w] = kept.weight[0] * counts[w]
+        sizes = np.where(seen, counts[w], 0).astype(np.int64)
+        members = np.empty(int(sizes.sum()), dtype=np.int32)
+        unpack_bits(kept.bits[0], sizes, members)
+        start = np.concatenate([[0], np.cumsum(sizes[seen])]).astype(np.int64)
+        summaries[w, seen] = shared.map.summaries(members, start)
+    out = {
+        "shares": shares,
+        "prior": prior,
+        "counts": counts,
+        "weight": weight,
+        "summaries": summaries,
+    }
+    if shared.entry is not None:
+        shared.entry.write(name, out)
+    return tuple(out.values())
+
+
+def draw_shares(rng: np.random.Generator, size: int, routes: int) -> tuple[FloatArray, FloatArray]:
+    """Draw shares: most from the flat density, some towards edges and corners.
+
+    Returns
+    -------
+    shares : (size, 3) float64
+    prior : (size,) float64
+        Flat density over the density drawn from, at most 1 / (1 - 0.2).
+    """
+    shares = np.zeros((size, 3))
+    edge = rng.random(size) < _EDGE
+    shares[:, :routes] = rng.dirichlet(np.ones(routes), size)
+    shares[edge, :routes] = rng.dirichlet(np.full(routes, 0.5), int(edge.sum()))
+    shares = np.maximum(shares, 0.0)
+    # Dirichlet(1/2, ...) over the flat density: 1 / (c prod sqrt(s)), c = 2 pi or pi.
+    root = np.sqrt(np.prod(np.maximum(shares[:, :routes], 1e-12), axis=1))
+    ratio = 1.0 / ((4.0 * np.pi if routes == 3 else np.pi) * root)
+    return shares, 1.0 / (1.0 - _EDGE + _EDGE * ratio)
+
+
+def draw_counts(rng: np.random.Generator, size: int, largest: int) -> npt.NDArray[np.int32]:
+    """(size, K) counts from SMALLEST to ``largest``, one from each of K equal parts of the logs.
+
+    Increasing along each row; all counts when there are no more than K.
+    """
+    smallest = min(SMALLEST, largest)
+    every = largest - smallest + 1
+    if every <= KEPT:
+        return np.tile(np.arange(smallest, largest + 1, dtype=np.int32), (size, 1))
+    log = np.linspace(np.log(smallest - 0.5), np.log(largest + 0.5), KEPT + 1)
+    at = log[:-1] + rng.random((size, KEPT)) * np.diff(log)
+    counts = np.clip(np.rint(np.exp(at)), smallest, largest).astype(np.int32)
+    for k in range(1, KEPT):
+        counts[:, k] = np.maximum(counts[:, k], counts[:, k - 1] + 1)
+    over = counts[:, -1] > largest
+    counts[over] = np.minimum(counts[over], largest - KEPT + 1 + np.arange(KEPT))
+    return counts
+
+
+def estimate_cost(
+    model: SpreadModel, *, largest: int, walks: int = WALKS, workers: int = 1, seed: int = 0
+) -> float:
+    """Seconds a bank will take, from a few timed walks (compilation left out).
+
+    The estimate is of the walks and their summaries; training adds up to half a minute.
+
+    Parameters
+    ----------
+    model, largest, walks, seed
+        As for :func:`build_bank`.
+    workers : int
+        Threads the walks are shared by.
+    """
+    shared = _prepare(model, largest=largest, seed=seed, walks=16, use_cache=False)
+    _chunk(dataclasses.replace(shared, walks=1), 0)
+    begun = time.perf_counter()
+    _chunk(shared, 0)
+    return (time.perf_counter() - begun) / 16 * walks / workers

@@ -1,0 +1,174 @@
+"""A small ensemble of networks from features to a density over the simplex.
+
+Each network has two hidden layers and a softmax over the hats of :mod:`simplex`; it is trained to
+the log density it gives to the shares each snapshot truly came from. That score is proper (Gneiting
+& Raftery 2007, JASA 102:359): its best answer is the posterior under the prior the bank was drawn
+from. Minibatch steps are Adam's (Kingma & Ba 2015).
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+
+from twicetold.evidence.shares._network_kernels import train_steps, weights_of
+from twicetold.evidence.shares.simplex import Simplex
+from twicetold.randomness import Stream, chunk_generator
+from twicetold.workers import Pool, ThreadPool
+
+FloatArray = npt.NDArray[np.float64]
+Float32 = npt.NDArray[np.float32]
+
+#: Units of the two hidden layers.
+HIDDEN = (64, 64)
+#: Snapshots in one step.
+BATCH = 512
+#: First rate of the steps, and decay of the parameters per unit of it.
+RATE, DECAY = 3e-3, 1e-4
+#: Steps between two looks at whether to stop (a fraction of a second).
+_SEGMENT = 100
+
+
+@dataclass(frozen=True)
+class Lessons:
+    """What the networks learn from. Arrays are read-only.
+
+    Parameters
+    ----------
+    inputs : (S, D) float32
+        Standardised features.
+    knots, factors : (S, C) int64, (S, C) float32
+        The density of the true shares over the prior is ``sum(weights[knots] * factors)``.
+    weight : (S,) float64
+        Importance of each snapshot.
+    """
+
+    inputs: Float32
+    knots: npt.NDArray[np.int64]
+    factors: Float32
+    weight: FloatArray
+
+
+@dataclass(frozen=True)
+class Ensemble:
+    """Trained networks.
+
+    Parameters
+    ----------
+    sizes : (4,) int64
+        Units of the input, hidden and output layers.
+    parameters : (E, P) float32
+    """
+
+    sizes: npt.NDArray[np.int64]
+    parameters: Float32
+
+    def weights(self, inputs: Float32) -> FloatArray:
+        """Average the members' knot weights; (S, G), rows sum to 1 but for rounding."""
+        total = np.zeros((len(inputs), int(self.sizes[-1])))
+        out = np.empty(total.shape, dtype=np.float32)
+        for member in self.parameters:
+            weights_of(inputs, member, self.sizes, out)
+            total += out
+        return np.asarray(total / total.sum(axis=1, keepdims=True))
+
+
+@dataclass
+class _Learner:
+    """One network under training; its arrays are changed in place by its own thread only."""
+
+    parameters: Float32
+    first: Float32
+    second: Float32
+    order: npt.NDArray[np.int64]
+    taken: int = 0
+
+
+def starting_parameters(
+    sizes: npt.NDArray[np.int64], prior: FloatArray, rng: np.random.Generator
+) -> Float32:
+    """Draw He's starting weights; the output layer starts near the flat prior."""
+    parts = []
+    for layer in range(3):
+        fan, units = int(sizes[layer]), int(sizes[layer + 1])
+        scale = np.sqrt(2.0 / fan) * (0.1 if layer == 2 else 1.0)
+        parts.append(rng.normal(scale=scale, size=fan * units))
+        parts.append(np.log(prior) if layer == 2 else np.zeros(units))
+    return np.concatenate(parts).astype(np.float32)
+
+
+def train(
+    lessons: Lessons, where: Simplex, *, seed: int, members: int, passes: float, pool: Pool
+) -> Ensemble:
+    """Train an ensemble; the same for any number of workers.
+
+    Parameters
+    ----------
+    lessons : Lessons
+    where : Simplex
+    seed : int
+    members : int
+        Networks in the ensemble.
+    passes : float
+        Times each snapshot is seen by each network.
+    pool : Pool
+        Networks are trained on local threads, as many as the pool has, never on a cluster: they
+        share the lessons in memory.
+    """
+    rows, width = lessons.inputs.shape
+    sizes = np.array([width, *HIDDEN, len(where.knots)], dtype=np.int64)
+    total = max(1, int(passes * rows) // BATCH)
+    batch = min(BATCH, rows)
+    learners = []
+    for member in range(members):
+        rng = chunk_generator(seed, Stream.SHARES, member)
+        start = starting_parameters(sizes, where.prior, rng)
+        repeats = [rng.permutation(rows) for _ in range(-(-total * batch // rows))]
+        order = np.concatenate(repeats)[: total * batch]
+        learners.append(_Learner(start, np.zeros_like(start), np.zeros_like(start), order))
+    threads = ThreadPool(min(members, getattr(pool, "workers", 1)))
+    progress = getattr(pool, "progress", None)
+    for step in range(0, total, _SEGMENT):
+        stop = min(step + _SEGMENT, total)
+        jobs = [(learner, stop, total, batch) for learner in learners]
+        for _ in threads.run(_segment, (lessons, sizes), jobs, label="training"):
+            pass
+        if progress is not None:
+            progress("learning the shares", stop, total)
+    out = np.stack([learner.parameters for learner in learners])
+    out.flags.writeable = False
+    return Ensemble(sizes, out)
+
+
+def _segment(
+    shared: tuple[Lessons, npt.NDArray[np.int64]], job: tuple[_Learner, int, int, int]
+) -> float:
+    lessons, sizes = shared
+    learner, stop, total, batch = job
+    score = train_steps(
+        lessons.inputs,
+        lessons.knots,
+        lessons.factors,
+        lessons.weight,
+        learner.order[learner.taken * batch : stop * batch],
+        batch,
+        learner.parameters,
+        learner.first,
+        learner.second,
+        sizes,
+        learner.taken,
+        total,
+        RATE,
+        DECAY,
+    )
+    learner.taken = stop
+    return float(score)
+
+
+def batches(rows: int, size: int) -> Iterator[slice]:
+    """Cut 0 .. rows into slices of at most ``size``."""
+    for start in range(0, rows, size):
+        yield slice(start, min(start + size, rows))
