@@ -84,6 +84,8 @@ def read_motifs(table: Table, columns: Columns, rules: CatalogueRules) -> MotifR
                 for part in ("name", "category")
             )
             out.add(identity, name, optional_text(category), access, row)
+    if table.stopped:
+        return None
     hidden.update(cells[at].strip() for cells in table.ragged if len(cells) > at)
     return _settle(out, hidden, table, at)
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from contextlib import ExitStack
 from dataclasses import dataclass
 from os import PathLike
 from pathlib import Path
@@ -91,7 +92,8 @@ def check_catalogue(
     where = Path(path)
     catalogue: Catalogue | None = None
     try:
-        catalogue = _read(where, rules or CatalogueRules(), notes)
+        with ExitStack() as stack:
+            catalogue = _read(where, rules or CatalogueRules(), notes, stack)
     except MemoryError:
         Spot(notes, where.name).error(
             "too large",
@@ -109,7 +111,7 @@ def check_catalogue(
     return catalogue, catalogue.warnings
 
 
-def _read(path: Path, rules: CatalogueRules, notes: Notes) -> Catalogue | None:
+def _read(path: Path, rules: CatalogueRules, notes: Notes, stack: ExitStack) -> Catalogue | None:
     found = detect(path, notes)
     if found is None:
         return None
@@ -119,7 +121,7 @@ def _read(path: Path, rules: CatalogueRules, notes: Notes) -> Catalogue | None:
         parts = _read_cldf(found.path, about, rules, notes, sources)
     else:
         if found.kind == "workbook":
-            tables = workbook_tables(found.path, notes, sources) or {}
+            tables = workbook_tables(found.path, notes, sources, stack) or {}
         else:
             tables = folder_tables(found.folder, notes, sources)
         if "about" in tables:

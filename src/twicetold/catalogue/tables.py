@@ -21,6 +21,10 @@ _BLOCK = limits.MEBIBYTE
 Opener = Callable[[], BinaryIO]
 
 
+class TableStoppedError(Exception):
+    """The rest of a table cannot be read; the reason has been noted."""
+
+
 @dataclass(frozen=True)
 class Chunk:
     """Some whole rows of a table: their row numbers and their cells, column by column."""
@@ -34,7 +38,7 @@ class Table:
     """A table with its header, whose rows are read when asked for.
 
     ``ragged`` gathers the cells of rows that do not fit the header: their ids are known to exist,
-    though nothing else of them can be trusted.
+    though nothing else of them can be trusted. ``stopped`` says that the table broke off.
     """
 
     file: str
@@ -46,6 +50,7 @@ class Table:
     nulls: dict[int, frozenset[str]] = field(default_factory=dict)
     separators: dict[int, str] = field(default_factory=dict)
     ragged: list[list[str]] = field(default_factory=list)
+    stopped: bool = False
 
     def spot(self, row: int = 0, at: int = -1, column: str = "") -> Spot:
         """The place of a row, and of a column by its index or name, for a note."""
@@ -57,7 +62,7 @@ class Table:
         row = self.header_row + 1
         source = self.records()
         size = max(1, min(size, 8 * 1_000_000 // max(1, width)))
-        while block := list(islice(source, size)):
+        while block := self._block(source, size):
             rows = np.arange(row, row + len(block), dtype=np.int32)
             row += len(block)
             if row > limits.TABLE_ROWS:
@@ -66,11 +71,19 @@ class Table:
                     f"has more than {limits.TABLE_ROWS:,} rows.",
                     "Split the catalogue, or drop rows that are not needed.",
                 )
+                self.stopped = True
                 return
             if set(map(len, block)) != {width} or not all(map(any, block)):
                 block, rows = self._fitting(block, rows, width)
             if block:
                 yield Chunk(rows, list(zip(*block, strict=True)))
+
+    def _block(self, source: Iterator[list[str]], size: int) -> list[list[str]]:
+        try:
+            return list(islice(source, size))
+        except TableStoppedError:
+            self.stopped = True
+            return []
 
     def _fitting(
         self, block: list[list[str]], rows: IntArray, width: int
@@ -129,21 +142,17 @@ def open_table(
         return None
     if not dialect.delimiter:
         dialect = _guess(opener, file, dialect)
-    stream = _records(opener, file, notes, dialect)
     header: tuple[str, ...] = names
     row = 0
     if dialect.header_rows:
-        for record in stream:
-            row += 1
-            if any(cell.strip() for cell in record):
-                header = tuple(cell.strip() for cell in record)
-                break
-        else:
-            if not notes.broken:
-                _say_empty(file, notes)
+        found = first_filled_row(_records(opener, file, notes, dialect))
+        if found is None:
+            return None
+        row, header = found
+        if not row:
+            _say_empty(file, notes)
             return None
         row += dialect.header_rows - 1
-    stream.close()
     if not check_header(header, file, row, notes):
         return None
 
@@ -152,6 +161,24 @@ def open_table(
         return islice(inner, row, None)
 
     return Table(file, header, row, records, notes, lines)
+
+
+def first_filled_row(
+    records: Generator[list[str], None, None],
+) -> tuple[int, tuple[str, ...]] | None:
+    """Number and trimmed cells of the first row that is not blank (0 when there is none).
+
+    None when the table breaks off before; the reason has then been noted.
+    """
+    try:
+        for row, record in enumerate(records, start=1):
+            if any(cell.strip() for cell in record):
+                return row, tuple(cell.strip() for cell in record)
+    except TableStoppedError:
+        return None
+    finally:
+        records.close()
+    return 0, ()
 
 
 def check_header(header: tuple[str, ...], file: str, row: int, notes: Notes) -> bool:
@@ -299,10 +326,9 @@ def _records(
                     yield []
                     continue
                 yield record
-        except csv.Error as exc:
+        except (csv.Error, UnicodeDecodeError) as exc:
             _say_broken(file, notes, count + 1, str(exc))
-        except UnicodeDecodeError:
-            _say_broken(file, notes, count + 1, "encoding")
+            raise TableStoppedError from exc
 
 
 def _say_broken(file: str, notes: Notes, row: int, reason: str) -> None:

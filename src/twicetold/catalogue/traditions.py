@@ -102,6 +102,8 @@ def read_traditions(table: Table, columns: Columns, rules: CatalogueRules) -> Tr
                 _say_repeated(table, columns, row, kept[found.tradition_id])
             else:
                 kept[found.tradition_id] = found
+    if table.stopped:
+        return None
     at = columns["id"]
     hidden.update(cells[at].strip() for cells in table.ragged if len(cells) > at)
     _settle(out, kept, hidden, table, columns)

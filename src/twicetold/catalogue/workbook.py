@@ -7,7 +7,8 @@ import hashlib
 import re
 import warnings
 import zipfile
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Generator, Iterator
+from contextlib import ExitStack
 from functools import partial
 from itertools import islice
 from pathlib import Path
@@ -16,7 +17,12 @@ from typing import Any
 from twicetold.catalogue import limits
 from twicetold.catalogue.model import SourceFile
 from twicetold.catalogue.notes import Notes, Spot, shown
-from twicetold.catalogue.tables import Table, check_header
+from twicetold.catalogue.tables import (
+    Table,
+    TableStoppedError,
+    check_header,
+    first_filled_row,
+)
 
 _ENCODING = re.compile(rb"""^<\?xml[^>]{0,200}encoding\s*=\s*["']([A-Za-z0-9._-]+)["']""")
 _HARMLESS_ENCODINGS = (b"utf-8", b"us-ascii", b"ascii", b"iso-8859-1", b"windows-1252")
@@ -24,8 +30,13 @@ _FORBIDDEN = (b"<!doctype", b"<!entity")
 _OVERLAP = 16
 
 
-def workbook_tables(path: Path, notes: Notes, sources: list[SourceFile]) -> dict[str, Table] | None:
-    """Tables of a workbook by sheet name in lower case; None, with the reason, when unsafe."""
+def workbook_tables(
+    path: Path, notes: Notes, sources: list[SourceFile], stack: ExitStack
+) -> dict[str, Table] | None:
+    """Tables of a workbook by sheet name in lower case; None, with the reason, when unsafe.
+
+    The workbook stays open until the ``stack`` is left.
+    """
     if not _is_safe(path, notes):
         return None
     import openpyxl
@@ -38,6 +49,7 @@ def workbook_tables(path: Path, notes: Notes, sources: list[SourceFile]) -> dict
     with warnings.catch_warnings():
         warnings.simplefilter("ignore")  # styles and extensions that carry no data
         book = openpyxl.load_workbook(path, read_only=True, data_only=False, keep_links=False)
+    stack.callback(book.close)
     tables: dict[str, Table] = {}
     for sheet in book.worksheets:
         key = sheet.title.strip().casefold()
@@ -59,17 +71,12 @@ def _sheet_table(sheet: Any, file: str, notes: Notes) -> Table | None:
     if reset is not None:
         reset()  # the size a sheet claims may be false
 
-    def records() -> Iterator[list[str]]:
-        yield from _rows(sheet, file, notes)
-
-    for row, record in enumerate(records(), start=1):
-        if any(cell.strip() for cell in record):
-            header = tuple(cell.strip() for cell in record)
-            if not check_header(header, file, row, notes):
-                return None
-            body = partial(_body, records, row, len(header))
-            return Table(file, header, row, body, notes)
-    return Table(file, (), 0, lambda: iter(()), notes)
+    records = partial(_rows, sheet, file, notes)
+    found = first_filled_row(records())
+    if found is None or not check_header(found[1], file, found[0], notes):
+        return None
+    row, header = found
+    return Table(file, header, row, partial(_body, records, row, len(header)), notes)
 
 
 def _body(
@@ -80,7 +87,7 @@ def _body(
         yield cells + [""] * (width - len(cells)) if cells else cells
 
 
-def _rows(sheet: Any, file: str, notes: Notes) -> Iterator[list[str]]:
+def _rows(sheet: Any, file: str, notes: Notes) -> Generator[list[str], None, None]:
     """Rows as text without trailing blanks, in the order of their numbers."""
     visited = 0
     with warnings.catch_warnings():
@@ -93,7 +100,7 @@ def _rows(sheet: Any, file: str, notes: Notes) -> Iterator[list[str]]:
                     "has more rows or cells than a sheet may hold.",
                     "Remove far-off stray cells, or give the tables as CSV.",
                 )
-                return
+                raise TableStoppedError
             end = len(values)
             while end and (values[end - 1] is None or values[end - 1] == ""):
                 end -= 1
