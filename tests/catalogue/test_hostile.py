@@ -17,8 +17,7 @@ from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 from small_catalogue import SOUND, write_csv, write_xlsx
 
-from twicetold.catalogue import Catalogue, CatalogueRules, check_catalogue
-from twicetold.catalogue import limits
+from twicetold.catalogue import Catalogue, CatalogueRules, check_catalogue, limits
 
 SECONDS = 5.0
 MEBIBYTE = 1 << 20
@@ -58,9 +57,6 @@ def book(sound, tmp_path) -> Path:
 
 
 def test_zip_bomb_is_refused_before_it_is_unpacked(book, tmp_path):
-    def swell(name: str, data: bytes) -> bytes:
-        return data + b" " * (600 * MEBIBYTE) if name == "xl/worksheets/sheet1.xml" else data
-
     before = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss
     path = tmp_path / "bomb.xlsx"
     with zipfile.ZipFile(book) as old, zipfile.ZipFile(path, "w", zipfile.ZIP_DEFLATED) as new:
@@ -167,7 +163,6 @@ def test_billion_cells(sound, tmp_path):
         handle.write("motif_id," + ",".join(f"t{k}" for k in range(10_000)) + "\n")
         handle.writelines("\n" for _ in range(100_000))
     said = examine(folder)
-    assert "matrix too large" not in said
     assert "more than 200,000,000 cells" in said
 
 
@@ -330,15 +325,64 @@ def test_zipped_table_that_is_none(tmp_path):
 TEXTS = st.one_of(
     st.text(max_size=12),
     st.sampled_from(
-        ["t1", "m1", "*", "0", "1", "-", "NA", "?", "=1+1", "@x", "1e999", "12,5", "−3", "\x00", '"']
-        + ['""', "'", ";", "\t", "\r", "\n", "\u202e", "\ufeff", "withheld", "restricted", "open"]
-        + ["90.0001", "-181", "nan", "inf", "999999999999999999999", "not searched", "x" * 300]
+        [
+            "t1",
+            "m1",
+            "*",
+            "0",
+            "1",
+            "-",
+            "NA",
+            "?",
+            "=1+1",
+            "@x",
+            "1e999",
+            "12,5",
+            "−3",
+            "\x00",
+            '"',
+            '""',
+            "'",
+            ";",
+            "\t",
+            "\r",
+            "\n",
+            "\u202e",
+            "\ufeff",
+            "withheld",
+            "restricted",
+            "open",
+            "90.0001",
+            "-181",
+            "nan",
+            "inf",
+            "999999999999999999999",
+            "not searched",
+            "x" * 300,
+        ]
     ),
 )
 NAMES = st.sampled_from(["traditions", "motifs", "attestations", "surveyed", "contacts", "matrix"])
 HEADERS = st.sampled_from(
-    ["tradition_id", "motif_id", "id", "name", "latitude", "longitude", "family", "effort"]
-    + ["access", "acces", "label", "state", "source", "neighbour_id", "category", "", "rain"]
+    [
+        "tradition_id",
+        "motif_id",
+        "id",
+        "name",
+        "latitude",
+        "longitude",
+        "family",
+        "effort",
+        "access",
+        "acces",
+        "label",
+        "state",
+        "source",
+        "neighbour_id",
+        "category",
+        "",
+        "rain",
+    ]
 )
 EDIT = st.one_of(
     st.tuples(st.just("cell"), NAMES, st.integers(0, 8), st.integers(0, 8), TEXTS),
@@ -406,8 +450,25 @@ JSON = st.recursive(
     max_leaves=6,
 )
 KEYS = st.sampled_from(
-    ["url", "tableSchema", "columns", "name", "titles", "propertyUrl", "null", "separator", "dialect"]
-    + ["dc:conformsTo", "tables", "delimiter", "encoding", "header", "skipRows", "dc:title", "virtual"]
+    [
+        "url",
+        "tableSchema",
+        "columns",
+        "name",
+        "titles",
+        "propertyUrl",
+        "null",
+        "separator",
+        "dialect",
+        "dc:conformsTo",
+        "tables",
+        "delimiter",
+        "encoding",
+        "header",
+        "skipRows",
+        "dc:title",
+        "virtual",
+    ]
 )
 
 
@@ -462,8 +523,16 @@ def _book_bytes() -> bytes:
 
 BOOK = _book_bytes()
 SHEET = st.sampled_from(
-    ["xl/worksheets/sheet1.xml", "xl/worksheets/sheet3.xml", "xl/workbook.xml", "[Content_Types].xml"]
-    + ["xl/sharedStrings.xml", "xl/_rels/workbook.xml.rels", "xl/styles.xml", "docProps/core.xml"]
+    [
+        "xl/worksheets/sheet1.xml",
+        "xl/worksheets/sheet3.xml",
+        "xl/workbook.xml",
+        "[Content_Types].xml",
+        "xl/sharedStrings.xml",
+        "xl/_rels/workbook.xml.rels",
+        "xl/styles.xml",
+        "docProps/core.xml",
+    ]
 )
 
 

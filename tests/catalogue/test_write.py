@@ -43,8 +43,19 @@ def catalogues(draw: st.DrawFn) -> Tables:
     ids = draw(st.lists(name, min_size=3, max_size=7, unique=True))
     motif_ids = draw(st.lists(name, min_size=1, max_size=6, unique=True))
     traditions = [
-        ["tradition_id", "name", "latitude", "longitude", "family", "branch", "region", "effort"]
-        + ["access", "label", "rain"]
+        [
+            "tradition_id",
+            "name",
+            "latitude",
+            "longitude",
+            "family",
+            "branch",
+            "region",
+            "effort",
+            "access",
+            "label",
+            "rain",
+        ]
     ]
     for k, identity in enumerate(ids):
         place = [draw(degrees), draw(degrees)] if k else ["12.5", "-170"]
@@ -53,9 +64,18 @@ def catalogues(draw: st.DrawFn) -> Tables:
         if k > 2 and draw(st.booleans()):
             place = ["", ""]
         traditions.append(
-            [identity, draw(name), *place, draw(label), draw(label), draw(label), draw(number)]
-            + [draw(st.sampled_from(["", "open", "restricted"])), draw(label)]
-            + [draw(st.one_of(st.just(""), number))]
+            [
+                identity,
+                draw(name),
+                *place,
+                draw(label),
+                draw(label),
+                draw(label),
+                draw(number),
+                draw(st.sampled_from(["", "open", "restricted"])),
+                draw(label),
+                draw(st.one_of(st.just(""), number)),
+            ]
         )
     motifs = [["motif_id", "name", "category", "access"]]
     motifs += [

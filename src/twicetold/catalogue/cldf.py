@@ -30,7 +30,6 @@ _ENCODINGS: Final = {
     "latin1": "latin-1",
     "windows-1252": "cp1252",
     "cp1252": "cp1252",
-    "utf-16": "utf-16",
 }
 _MOST_TABLES: Final = 500
 
@@ -261,7 +260,7 @@ def _column_name(column: Json, k: int) -> str:
 
 def _inside(url: object, folder: Path, notes: Notes) -> Path | None:
     """The file a table's ``url`` names, if it lies inside the dataset's own folder."""
-    if not isinstance(url, str) or not url or "\x00" in url or len(url) > 1_000:
+    if not isinstance(url, str) or not url or not url.isprintable() or len(url) > 1_000:
         Spot(notes, "CLDF metadata").error(
             "bad table url",
             "a table of the dataset has no usable url.",
@@ -280,7 +279,7 @@ def _inside(url: object, folder: Path, notes: Notes) -> Path | None:
     for name in (url, url + ".zip"):
         try:
             path = (folder / name).resolve()
-        except (OSError, RuntimeError):
+        except (OSError, RuntimeError, ValueError):
             continue
         if not path.is_relative_to(root):
             Spot(notes, "CLDF metadata").error(
