@@ -54,14 +54,15 @@ PROPENSITY = np.array([1.0, 2.0, 3.0, 0.5, 4.0, 0.0])
 
 
 @pytest.mark.parametrize("recording", RECORDING)
+@pytest.mark.parametrize("spill", ["emergence", "transmission"])
 @pytest.mark.parametrize("name", ZOO)
-def test_kernel_matches_linear_algebra(name, recording):
+def test_kernel_matches_linear_algebra(name, spill, recording):
     n, edges, family, x, shares, reach, cap = ZOO[name]
     rate = None if RECORDING[recording] is None else RECORDING[recording][:n]
     propensity = PROPENSITY[:n]
-    solver = Solver(n, edges, x, shares, family, propensity, reach)
+    solver = Solver(n, edges, x, shares, family, propensity, reach, spill == "transmission")
     model = SpreadModel(
-        as_contact_graph(n, edges), x, shares, family, propensity, reach, recorded=rate
+        as_contact_graph(n, edges), x, shares, family, propensity, reach, recorded=rate, spill=spill
     )
     tables = chain_tables(model, cap)
     counts = np.arange(1, n + 1, dtype=np.int32)

@@ -22,10 +22,10 @@ class Solver:
     """
 
     def __init__(  # noqa: PLR0917
-        self, n, edges, x, shares=(0, 1, 0), family=None, propensity=None, reach=1.0
+        self, n, edges, x, shares=(0, 1, 0), family=None, propensity=None, reach=1.0, spill=False
     ):
         self.n, self.edges, self.x = n, [tuple(e) for e in edges], x
-        self.shares, self.reach = shares, reach
+        self.shares, self.reach, self.spill = shares, reach, spill
         self.family = list(range(n)) if family is None else list(family)
         self.propensity = np.ones(n) if propensity is None else np.asarray(propensity, float)
         self.near = [[] for _ in range(n)]
@@ -64,21 +64,31 @@ class Solver:
             for v, share in emergence.items():
                 law[v] += p * share
 
-        emerge(e)
         boundary = [v for j in s for v in self.near[j] if v not in s]
-        if boundary:
+
+        def contact(p, otherwise):
+            if not boundary:
+                return otherwise(p)
             for v in boundary:
-                for end, p in self.carried(v, s).items():
-                    law[end] += c / len(boundary) * p
-        else:
-            emerge(c)
-        for j in s:
-            kin = [v for v in out if self.family[v] == self.family[j]]
-            if kin:
+                for end, q in self.carried(v, s).items():
+                    law[end] += p / len(boundary) * q
+            return None
+
+        def inherit(p, otherwise):
+            for j in s:
+                kin = [v for v in out if self.family[v] == self.family[j]]
                 for v in kin:
-                    law[v] += i / len(s) / len(kin)
-            else:
-                emerge(i / len(s))
+                    law[v] += p / len(s) / len(kin)
+                if not kin:
+                    otherwise(p / len(s))
+
+        emerge(e)
+        if self.spill:
+            contact(c, (lambda p: inherit(p, emerge)) if i > 0 else emerge)
+            inherit(i, lambda p: contact(p, emerge))
+        else:
+            contact(c, emerge)
+            inherit(i, emerge)
         assert abs(sum(law.values()) - 1) < 1e-12
         return law
 

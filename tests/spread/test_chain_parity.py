@@ -15,6 +15,7 @@ SETTINGS = {
     "emergence": ((1.0, 0.0, 0.0), 1.0, False),
     "inheritance": ((0.0, 0.0, 1.0), 1.0, True),
     "mixture": ((0.2, 0.5, 0.3), 2.0, True),
+    "transmission": ((0.0, 0.5, 0.5), 1.0, True),
 }
 
 
@@ -29,6 +30,7 @@ def model_of(name, setting, **more):
         propensity=np.linspace(0, 2, n),
         reach=reach,
         recorded=np.linspace(0.2, 1, n) if recording else None,
+        spill="transmission" if setting == "transmission" else "emergence",
         **more,
     )
 
@@ -41,7 +43,7 @@ def test_parity(name, setting):
     words = chunk_words(5, Stream.SPREAD, 0, draws=20)
     counts = np.arange(1, model.graph.n + 1, dtype=np.int32)
     fast, plain = walk_chunk(tables, words, counts), walk_plain(tables, words, counts)
-    for field in ("bits", "weight", "gains", "full_steps"):
+    for field in ("bits", "weight", "gains", "visits"):
         np.testing.assert_array_equal(getattr(fast, field), getattr(plain, field), err_msg=field)
     near = [
         model.graph.indices[a:b].tolist()
@@ -104,6 +106,7 @@ def test_cap_from_the_catalogue():
         ({"shares": (0.5, 0.6, 0.0)}, "sum to 1"),
         ({"shares": (-0.5, 1.5, 0.0)}, "shares"),
         ({"reach": 0.5}, "reach"),
+        ({"spill": "nowhere"}, "spill"),
         ({"recorded": np.full(5, 1.2)}, "recorded"),
         ({"propensity": np.zeros(5)}, "propensity"),
         ({"propensity": np.ones(4)}, "propensity"),

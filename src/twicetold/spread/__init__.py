@@ -14,6 +14,7 @@ from twicetold.spread.chain import (
     chain_tables,
     walk_chunk,
 )
+from twicetold.spread.world import SpreadWorld, spread_world
 
 __all__ = [
     "ROUTES",
@@ -22,7 +23,9 @@ __all__ = [
     "Snapshots",
     "SpreadError",
     "SpreadModel",
+    "SpreadWorld",
     "cap_for",
     "chain_tables",
+    "spread_world",
     "walk_chunk",
 ]

@@ -105,6 +105,7 @@ def walk_kernel(  # type: ignore[no-untyped-def]
     recorded_rate,
     shares,
     onward,
+    spill,
     cap,
     up_before,
     up_after,
@@ -115,12 +116,12 @@ def walk_kernel(  # type: ignore[no-untyped-def]
     bits,
     weight,
     gains,
-    full_steps,
+    visits,
 ):
     """Run one walk per row of ``words`` and keep one weighted visit per asked-for count.
 
     See :mod:`twicetold.spread.chain` for the chain, the weights and the meaning of the arrays.
-    ``bits``, ``weight``, ``gains`` and ``full_steps`` are filled in place and must come in zeroed.
+    ``bits``, ``weight``, ``gains`` and ``visits`` are filled in place and must come in zeroed.
     """
     n = len(indptr) - 1
     n_words = bits.shape[2]
@@ -154,7 +155,7 @@ def walk_kernel(  # type: ignore[no-untyped-def]
         emerged = 0
         carried = 0
         inherited = 0
-        at_full = 0
+        below_full = 0
         gained = next_below(state, n)
         while True:
             if gained >= 0:
@@ -167,8 +168,6 @@ def walk_kernel(  # type: ignore[no-untyped-def]
                 moved = gained
             else:
                 # A loss, from a uniformly chosen holder.
-                if m == n:
-                    at_full += 1
                 moved = holders[next_below(state, m)]
                 m -= 1
                 held[moved] = 0
@@ -197,6 +196,8 @@ def walk_kernel(  # type: ignore[no-untyped-def]
                 break
             if m >= cap:
                 before = False
+            if m < n:
+                below_full += 1
             # The visit: weighted reservoir of size one for the recorded count.
             toss = next_double(state)
             slot = slot_of[seen]
@@ -212,20 +213,26 @@ def walk_kernel(  # type: ignore[no-untyped-def]
                     gains[w, slot, 0] = emerged
                     gains[w, slot, 1] = carried
                     gains[w, slot, 2] = inherited
-                    full_steps[w, slot] = at_full
+                    visits[w, slot] = below_full
             up = up_before[m] if before else up_after[m]
             if next_double(state) >= up:
                 gained = -1
                 continue
             route = next_double(state)
             gained = -1
-            if route >= until_contact:
+            by_kin = kin and route >= until_contact
+            by_contact = not by_kin and route >= until_emergence
+            if by_contact and boundary == 0 and spill:
+                by_kin = kin
+            if by_kin:
                 teller = holders[next_below(state, m)]
                 f = family[teller]
                 if free[f] > 0:
                     gained = members[family_start[f] + next_below(state, free[f])]
                     inherited += 1
-            elif route >= until_emergence and boundary > 0:
+                elif spill:
+                    by_contact = True
+            if gained < 0 and by_contact and boundary > 0:
                 gained = _pick_contact(
                     state, m, boundary, holders, held, indptr, indices, max_degree, onward
                 )

@@ -97,15 +97,15 @@ def walk_plain(
     bits = np.zeros((len(words), len(counts), n_words), dtype=np.uint64)
     weight = np.zeros((len(words), len(counts)))
     gains = np.zeros((len(words), len(counts), 3), dtype=np.int64)
-    full_steps = np.zeros((len(words), len(counts)), dtype=np.int64)
-    for w, visits in enumerate(kept):
-        for slot, (total, held, routes, at_full) in visits.items():
+    visits = np.zeros((len(words), len(counts)), dtype=np.int64)
+    for w, by_slot in enumerate(kept):
+        for slot, (total, held, routes, below_full) in by_slot.items():
             weight[w, slot] = total
             for i in held:
                 bits[w, slot, i >> 6] |= np.uint64(1) << np.uint64(i & 63)
             gains[w, slot] = routes
-            full_steps[w, slot] = at_full
-    return Snapshots(counts=counts, bits=bits, weight=weight, gains=gains, full_steps=full_steps)
+            visits[w, slot] = below_full
+    return Snapshots(counts=counts, bits=bits, weight=weight, gains=gains, visits=visits)
 
 
 _Visit = tuple[float, frozenset[int], tuple[int, ...], int]
@@ -123,13 +123,14 @@ def _one_walk(
     with_kin = len(t.family_members) > 0
     kin = _Kin(t.family.tolist(), t.family_start.tolist(), t.family_members.tolist())
     kept: dict[int, _Visit] = {}
-    routes, at_full, before = [0, 0, 0], 0, True
+    routes, below_full, before = [0, 0, 0], 0, True
     holders = [stream.below(t.n)]
     if with_kin:
         kin.gain(holders[0])
     while holders:
         m = len(holders)
         before = before and m < t.cap
+        below_full += m < t.n
         toss = stream.double()
         seen = recorded & set(holders)
         if len(seen) in slot_of:
@@ -140,11 +141,10 @@ def _one_walk(
                 visit = t.power[t.cap - min(len(seen), t.cap)] * t.hold[m]
             total = kept[slot][0] + visit if slot in kept else 0.0 + visit
             if toss * total < visit:
-                kept[slot] = (float(total), frozenset(seen), tuple(routes), at_full)
+                kept[slot] = (float(total), frozenset(seen), tuple(routes), below_full)
             elif slot in kept:
                 kept[slot] = (float(total), *kept[slot][1:])
         if stream.double() >= (t.up_before[m] if before else t.up_after[m]):
-            at_full += m == t.n
             at = stream.below(m)
             lost = holders[at]
             holders[at] = holders[-1]
@@ -172,12 +172,16 @@ def _gain(  # noqa: PLR0917
     emergence, contact, inheritance = t.shares
     route = stream.double()
     held = set(holders)
-    if inheritance > 0.0 and route >= emergence + contact:
+    boundary = any(v not in held for j in holders for v in neighbours[j])
+    by_kin = inheritance > 0.0 and route >= emergence + contact
+    by_contact = not by_kin and route >= emergence
+    if by_kin or (by_contact and t.spill and not boundary and inheritance > 0.0):
         free = kin.free[kin.family[holders[stream.below(len(holders))]]]
         if free:
             routes[2] += 1
             return free[stream.below(len(free))]
-    elif route >= emergence and any(v not in held for j in holders for v in neighbours[j]):
+        by_contact = by_contact or t.spill
+    if by_contact and boundary:
         routes[1] += 1
         return pick_contact(stream, holders, neighbours, t.onward)
     routes[0] += 1

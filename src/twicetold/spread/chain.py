@@ -13,7 +13,10 @@ route of a gain is drawn from the shares:
 - *inheritance*: a uniformly chosen holder passes it to a uniformly chosen non-holder of its family.
 
 Where the route is impossible (no boundary edge, the chosen holder's family full) the gain goes by
-emergence, and the realised routes are counted. It is a birth-death relative of the contact process
+emergence, and the realised routes are counted. In a world without second inventions that rule would
+bring them in by the back door (small families fill at once); there (``spill="transmission"``) an
+impossible inheritance goes by contact and an impossible contact by inheritance, and only where both
+are impossible does the motif emerge anew. It is a birth-death relative of the contact process
 (Harris 1974, Annals of Probability 2:969), normalised so that the *count* walks by itself: motifs
 that appear at a constant rate and are seen at a fixed time have P(n) in proportion to x**n / n
 (Fisher, Corbet & Williams 1943), on any graph and for any shares.
@@ -82,6 +85,9 @@ class SpreadModel:
         Mean number of steps a contact walks, >= 1.
     recorded : (N,) float64 or None
         Probability that a holder is recorded, in [0, 1]; None records all.
+    spill : str
+        Where an impossible route goes: ``emergence``, or ``transmission`` (the other of contact
+        and inheritance first).
     """
 
     graph: ContactGraph
@@ -91,6 +97,7 @@ class SpreadModel:
     propensity: FloatArray | None = None
     reach: float = 1.0
     recorded: FloatArray | None = None
+    spill: str = "emergence"
 
     def __post_init__(self) -> None:
         n = self.graph.n
@@ -112,6 +119,8 @@ class SpreadModel:
             )
         if not 1.0 <= self.reach < np.inf:
             raise SpreadError(f"`reach` must be a number from 1 up, got {self.reach}.")
+        if self.spill not in {"emergence", "transmission"}:
+            raise SpreadError(f"`spill` must be emergence or transmission, got {self.spill!r}.")
         for name, values, top in (
             ("propensity", self.propensity, np.inf),
             ("recorded", self.recorded, 1.0),
@@ -176,6 +185,7 @@ class ChainTables:
     recorded_rate: FloatArray
     shares: FloatArray
     onward: float
+    spill: bool
     cap: int
     up_before: FloatArray
     up_after: FloatArray
@@ -219,6 +229,7 @@ def chain_tables(model: SpreadModel, cap: int) -> ChainTables:
         recorded_rate=np.zeros(0) if model.recorded is None else np.array(model.recorded, float),
         shares=np.array(model.shares),
         onward=1.0 - 1.0 / model.reach,
+        spill=model.spill == "transmission",
         cap=cap,
         up_before=up_before,
         up_after=up_after,
@@ -246,15 +257,16 @@ class Snapshots:
         The walk's total weight for the count; 0 when it was never visited (no snapshot then).
     gains : (walks, K, 3) int64
         Gains by emergence, contact and inheritance up to the kept visit (realised routes).
-    full_steps : (walks, K) int64
-        Losses from the full graph up to the kept visit (for reweighting to another turnover).
+    visits : (walks, K) int64
+        Visits to states with fewer than N holders, up to and with the kept one (with ``gains``,
+        what reweighting to another turnover needs).
     """
 
     counts: IntArray
     bits: npt.NDArray[np.uint64]
     weight: FloatArray
     gains: npt.NDArray[np.int64]
-    full_steps: npt.NDArray[np.int64]
+    visits: npt.NDArray[np.int64]
 
     def holders(self, walk: int, slot: int) -> IntArray:
         """Sorted recorded holders of one kept visit."""
@@ -294,7 +306,7 @@ def walk_chunk(
         bits=np.zeros((*shape, (tables.n + 63) // 64), dtype=np.uint64),
         weight=np.zeros(shape),
         gains=np.zeros((*shape, 3), dtype=np.int64),
-        full_steps=np.zeros(shape, dtype=np.int64),
+        visits=np.zeros(shape, dtype=np.int64),
     )
     walk_kernel(
         words,
@@ -308,6 +320,7 @@ def walk_chunk(
         tables.recorded_rate,
         tables.shares,
         tables.onward,
+        tables.spill,
         tables.cap,
         tables.up_before,
         tables.up_after,
@@ -318,6 +331,6 @@ def walk_chunk(
         out.bits,
         out.weight,
         out.gains,
-        out.full_steps,
+        out.visits,
     )
     return out
