@@ -190,9 +190,14 @@ def test_no_row_may_mean_not_searched(tmp_path):
     folder = dataset(tmp_path)
     lines = (folder / "values.csv").read_text().splitlines(keepends=True)
     (folder / "values.csv").write_text("".join(x for x in lines if not x.startswith("1,")))
-    assert read_catalogue(folder).states(0).tolist() == [A, B, N]
+    with (folder / "values.csv").open("a") as handle:
+        handle.write("93,l3,p1,no,,,\n")
+    loose, warnings = check_catalogue(folder)
+    assert loose is not None
+    assert loose.states(0).tolist() == [A, B, B]
+    assert any("no row at all" in w.what for w in warnings)
     rules = CatalogueRules(absent_rows="not searched")
-    assert read_catalogue(folder, rules).states(0).tolist() == [A, N, N]
+    assert read_catalogue(folder, rules).states(0).tolist() == [A, N, B]
 
 
 def test_no_parameter_and_no_code_table(tmp_path):

@@ -49,7 +49,7 @@ ABOUT_BYTES: Final = MEBIBYTE
 LAND_BYTES: Final = 64 * MEBIBYTE
 """Largest ``land.geojson``."""
 
-CHUNK_ROWS: Final = 65_536
+CHUNK_ROWS: Final = 8_192
 """Rows held as text at a time."""
 PROBLEMS_SHOWN: Final = 20
 """Problems of one kind in one file that are printed; the rest are counted."""

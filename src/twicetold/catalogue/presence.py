@@ -170,6 +170,8 @@ def build_presence(
     edges = np.searchsorted(motif, np.arange(m + 1))
     plain = np.bincount(motif[state != CellState.ATTESTED], minlength=m) == 0
     usual = sets.code(np.full(n, searched)) if searched and not listed.star_given else -1
+    if searched and surveyed is None:
+        _warn_mixed(motif, state, (m, n), Spot(notes, file))
     for k in range(m):
         if usual >= 0 and plain[k] and k not in listed.rows:
             of[k] = usual
@@ -198,6 +200,20 @@ def build_presence(
         of,
         unlocated,
     )
+
+
+def _warn_mixed(motif: IntArray, state: StateArray, shape: tuple[int, int], spot: Spot) -> None:
+    """Warn where absences are recorded for some traditions and nothing at all for others."""
+    m, n = shape
+    absences = np.bincount(motif[state == CellState.ABSENT], minlength=m)
+    mixed = np.flatnonzero((absences > 0) & (np.bincount(motif, minlength=m) < n))
+    if len(mixed):
+        spot.warn(
+            "absences beside missing rows",
+            f"for {len(mixed):,} motif(s) some traditions have a recorded absence and others no "
+            "row at all; both are read as searched and absent.",
+            'Set absent_rows = "not searched" in the plan if no row means that nobody looked.',
+        )
 
 
 def _apply(mask: BoolArray, tradition: IntArray, state: StateArray) -> None:
