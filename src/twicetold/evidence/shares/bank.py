@@ -10,6 +10,7 @@ from __future__ import annotations
 import dataclasses
 import time
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
@@ -32,6 +33,8 @@ WALKS = 33_000
 KEPT = 12
 #: Fewest holders that are looked at.
 SMALLEST = 2
+#: Counts are drawn up to this many times the largest: the network is weakest at the ends.
+_BEYOND = 1.15
 #: Part of the walks drawn towards the edges and corners of the simplex, where a flat draw is thin.
 _EDGE = 0.2
 
@@ -83,6 +86,7 @@ class _Shared:
     map: Landscape
     seed: int
     largest: int
+    ceiling: int
     routes: int
     walks: int
     entry: Entry | None
@@ -123,12 +127,20 @@ def build_bank(
     shared = _prepare(model, largest=largest, seed=seed, walks=walks, use_cache=use_cache)
     keys = list(range(-(-walks // CHUNK)))
     parts = list((pool or ThreadPool()).run(_chunk, shared, keys, label="walking the shares bank"))
-    joined = [np.concatenate([part[k] for part in parts]) for k in range(5)]
-    for array in joined:
+    joined = {name: np.concatenate([part[name] for part in parts]) for name in parts[0]}
+    for array in joined.values():
         array.flags.writeable = False
-    if shared.entry is not None:
-        shared.entry.touch()
-    return Bank(*joined, shared.largest, shared.routes, shared.map, shared.entry)
+    return Bank(
+        shares=joined["shares"],
+        prior=joined["prior"],
+        counts=joined["counts"],
+        weight=joined["weight"],
+        summaries=joined["summaries"],
+        largest=shared.largest,
+        routes=shared.routes,
+        map=shared.map,
+        entry=shared.entry,
+    )
 
 
 def _prepare(
@@ -149,7 +161,8 @@ def _prepare(
     entry = None
     if use_cache:
         entry = open_entry(_what_it_depends_on(base, largest, seed, walks, cap))
-    return _Shared(chain_tables(base, cap), place, seed, largest, routes, walks, entry)
+    ceiling = min(n, int(largest * _BEYOND))
+    return _Shared(chain_tables(base, cap), place, seed, largest, ceiling, routes, walks, entry)
 
 
 def _what_it_depends_on(
@@ -168,23 +181,23 @@ def _what_it_depends_on(
         "cap": cap,
         "seed": seed,
         "walks": walks,
-        "design": (CHUNK, KEPT, SMALLEST, _EDGE),
+        "design": (CHUNK, KEPT, SMALLEST, _EDGE, _BEYOND),
         "summaries": SUMMARIES,
     }
 
 
-def _chunk(shared: _Shared, key: int) -> tuple[npt.NDArray[np.generic], ...]:
+def _chunk(shared: _Shared, key: int) -> dict[str, npt.NDArray[Any]]:
     """Give one chunk of walks, from the cache when it is there."""
     name = f"walks-{key:05d}"
     if shared.entry is not None:
         found = shared.entry.read(name)
         if found is not None:
-            return tuple(found[k] for k in ("shares", "prior", "counts", "weight", "summaries"))
+            return found
     size = min(CHUNK, shared.walks - key * CHUNK)
     rng = chunk_generator(shared.seed, Stream.BANK, key, 1)
     words = chunk_words(shared.seed, Stream.BANK, key, 0, draws=size)
     shares, prior = draw_shares(rng, size, shared.routes)
-    counts = draw_counts(rng, size, shared.largest)
+    counts = draw_counts(rng, size, shared.ceiling)
     weight = np.zeros(counts.shape)
     summaries = np.zeros((*counts.shape, len(SUMMARIES)), dtype=np.float32)
     for w in range(size):
@@ -198,7 +211,7 @@ def _chunk(shared: _Shared, key: int) -> tuple[npt.NDArray[np.generic], ...]:
         unpack_bits(kept.bits[0], sizes, members)
         start = np.concatenate([[0], np.cumsum(sizes[seen])]).astype(np.int64)
         summaries[w, seen] = shared.map.summaries(members, start)
-    out = {
+    out: dict[str, npt.NDArray[Any]] = {
         "shares": shares,
         "prior": prior,
         "counts": counts,
@@ -207,7 +220,7 @@ def _chunk(shared: _Shared, key: int) -> tuple[npt.NDArray[np.generic], ...]:
     }
     if shared.entry is not None:
         shared.entry.write(name, out)
-    return tuple(out.values())
+    return out
 
 
 def draw_shares(rng: np.random.Generator, size: int, routes: int) -> tuple[FloatArray, FloatArray]:

@@ -24,6 +24,7 @@ from contextlib import suppress
 from dataclasses import dataclass
 from functools import lru_cache
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
@@ -49,7 +50,7 @@ class Entry:
 
     folder: Path
 
-    def read(self, name: str) -> dict[str, npt.NDArray[np.generic]] | None:
+    def read(self, name: str) -> dict[str, npt.NDArray[Any]] | None:
         """Give a piece's arrays, or None when it is not there or does not match its hash."""
         path = self.folder / f"{name}.bin"
         try:
@@ -65,7 +66,7 @@ class Entry:
             path.unlink()
         return None
 
-    def write(self, name: str, arrays: Mapping[str, npt.NDArray[np.generic]]) -> None:
+    def write(self, name: str, arrays: Mapping[str, npt.NDArray[Any]]) -> None:
         """Keep a piece. A disk that cannot be written to costs time later, not the run."""
         buffer = io.BytesIO()
         np.savez(buffer, **arrays)  # type: ignore[arg-type]
@@ -143,7 +144,10 @@ def kernel_version() -> str:
     package = Path(twicetold.__file__).parent
     made_by = [
         *(here / f"{name}.py" for name in ("_kernels", "bank", "landscape")),
-        *(here / f"{name}.py" for name in ("_network_kernels", "features", "network", "posterior")),
+        *(
+            here / f"{name}.py"
+            for name in ("_network_kernels", "features", "network", "posterior", "heldout")
+        ),
         *(Path(spread.__file__).parent / f"{name}.py" for name in ("_kernels", "chain")),
         *(package / f"{name}.py" for name in ("_sfc64", "randomness")),
     ]

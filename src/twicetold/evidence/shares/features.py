@@ -15,6 +15,12 @@ FloatArray = npt.NDArray[np.float64]
 CUT = 5.0
 #: A feature whose sd falls below this at some number of holders says nothing there.
 _CONSTANT = 1e-4
+#: Counts of holders or of groups of them, from 0 to n.
+_COUNTED = (
+    *(f"groups_{d}" for d in (1, 2, 3, 4)),
+    *("strands", "strands_2", "families", "largest_cluster", "largest_strand", "largest_family"),
+    *("lone_1", "lone_2", "lone_3", "cut_off", "mixed_clusters", "fragments"),
+)
 _COLUMN = {name: k for k, name in enumerate(SUMMARIES)}
 
 
@@ -42,10 +48,7 @@ def features(summaries: npt.ArrayLike, holders: npt.ArrayLike) -> FloatArray:
     for d in (1, 2, 3, 4):
         # Counts of pairs are roughly Poisson: their roots have a steady spread.
         columns += [np.sqrt(c(f"same_pairs_{d}") / n), np.sqrt(c(f"cross_pairs_{d}") / n)]
-    counted = ("groups_1", "groups_2", "groups_3", "groups_4", "strands", "strands_2", "families")
-    counted += ("largest_cluster", "largest_strand", "largest_family", "lone_1", "lone_2")
-    counted += ("lone_3", "cut_off", "mixed_clusters", "fragments")
-    for name in counted:
+    for name in _COUNTED:
         # The share of holders tells many from few; the log tells one from two.
         columns += [c(name) / n, np.log1p(c(name))]
     for name in ("second_cluster", "largest_group_2", "single_families", "saturation"):

@@ -172,4 +172,4 @@ def _standardised(n: int, propensity: FloatArray | None) -> FloatArray:
     sd = float(log.std())
     if sd < 1e-9:
         return np.zeros(n)
-    return np.clip((log - log.mean()) / sd, -4.0, 4.0)
+    return np.asarray(np.clip((log - log.mean()) / sd, -4.0, 4.0))

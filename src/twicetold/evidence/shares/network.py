@@ -8,7 +8,6 @@ from. Minibatch steps are Adam's (Kingma & Ba 2015).
 
 from __future__ import annotations
 
-from collections.abc import Iterator
 from dataclasses import dataclass
 
 import numpy as np
@@ -28,6 +27,8 @@ HIDDEN = (64, 64)
 BATCH = 512
 #: First rate of the steps, and decay of the parameters per unit of it.
 RATE, DECAY = 3e-3, 1e-4
+#: Times a network may see the same snapshot.
+_REPEATS = 20
 #: Steps between two looks at whether to stop (a fraction of a second).
 _SEGMENT = 100
 
@@ -101,7 +102,7 @@ def starting_parameters(
 
 
 def train(
-    lessons: Lessons, where: Simplex, *, seed: int, members: int, passes: float, pool: Pool
+    lessons: Lessons, where: Simplex, *, seed: int, members: int, steps: int, pool: Pool
 ) -> Ensemble:
     """Train an ensemble; the same for any number of workers.
 
@@ -112,16 +113,16 @@ def train(
     seed : int
     members : int
         Networks in the ensemble.
-    passes : float
-        Times each snapshot is seen by each network.
+    steps : int
+        Steps of each network; fewer when that would show it a snapshot more than 20 times.
     pool : Pool
         Networks are trained on local threads, as many as the pool has, never on a cluster: they
         share the lessons in memory.
     """
     rows, width = lessons.inputs.shape
     sizes = np.array([width, *HIDDEN, len(where.knots)], dtype=np.int64)
-    total = max(1, int(passes * rows) // BATCH)
     batch = min(BATCH, rows)
+    total = max(1, min(steps, _REPEATS * rows // batch))
     learners = []
     for member in range(members):
         rng = chunk_generator(seed, Stream.SHARES, member)
@@ -166,9 +167,3 @@ def _segment(
     )
     learner.taken = stop
     return float(score)
-
-
-def batches(rows: int, size: int) -> Iterator[slice]:
-    """Cut 0 .. rows into slices of at most ``size``."""
-    for start in range(0, rows, size):
-        yield slice(start, min(start + size, rows))

@@ -2,17 +2,17 @@
 
 from __future__ import annotations
 
-import logging
 from collections.abc import Sequence
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
-from scipy.optimize import minimize_scalar
 
 from twicetold.evidence.results import RouteShares
 from twicetold.evidence.shares.bank import SMALLEST, Bank
-from twicetold.evidence.shares.features import Scale, features, fit_scale, hats, holder_knots
+from twicetold.evidence.shares.features import Scale, features, fit_scale, holder_knots
+from twicetold.evidence.shares.heldout import HeldOut, at_knots, sharpened
 from twicetold.evidence.shares.landscape import Landscape
 from twicetold.evidence.shares.network import Ensemble, Lessons, train
 from twicetold.evidence.shares.simplex import Simplex, simplex
@@ -24,11 +24,10 @@ IntArray = npt.NDArray[np.int32]
 
 #: Every tenth walk is kept from training, to recalibrate and to decide where to refuse.
 HELD_OUT = 10
-#: Networks, and times each of them sees every snapshot.
-MEMBERS, PASSES = 2, 5.0
+#: Networks, and steps of each one's training.
+MEMBERS, STEPS = 2, 3500
 #: Shares are refused where intervals are on average wider than this part of the prior's.
 NARROWER = 0.95
-_log = logging.getLogger(__name__)
 
 
 @dataclass(frozen=True)
@@ -77,16 +76,13 @@ class SharesModel:
         reasons = [self._refusal(len(held)) for held in sets]
         told = [held for held, reason in zip(sets, reasons, strict=True) if not reason]
         answers = iter(self._told(told))
-        blank = self._blank()
-        return [
-            RouteShares(**blank, refused=reason) if reason else next(answers) for reason in reasons
-        ]
+        return [self._refused(reason) if reason else next(answers) for reason in reasons]
 
     def weights(self, summaries: npt.ArrayLike, holders: npt.ArrayLike) -> FloatArray:
         """(S, G) posterior weights of the knots for S rows of summaries."""
         values = features(summaries, holders)
         raw = self.ensemble.weights(self.scale.apply(values, holders))
-        return sharpened(raw, self.where.prior, _at(self.sharpness, holders, self.scale.knots))
+        return sharpened(raw, self.where.prior, at_knots(self.sharpness, holders, self.scale.knots))
 
     def refused_at(self, holders: int) -> str:
         """Why no shares are given at this number of holders, or nothing."""
@@ -99,25 +95,25 @@ class SharesModel:
             return "every surveyed tradition holds it, so its geography says nothing"
         if n > self.largest:
             return f"the bank of simulated motifs covers up to {self.largest} holders"
-        if float(_at(self.width, np.array([n]), self.scale.knots)[0]) > NARROWER:
+        if float(at_knots(self.width, np.array([n]), self.scale.knots)[0]) > NARROWER:
             return (
                 f"at {n} holders on this map the shares would be no better known than before "
                 "looking (intervals as wide as with no data)"
             )
         return ""
 
-    def _blank(self) -> dict[str, object]:
+    def _refused(self, reason: str) -> RouteShares:
         nothing = np.full(self.routes, np.nan)
         nothing.flags.writeable = False
-        prior = self.where.prior
-        return {
-            "routes": ROUTES[: self.routes],
-            "mean": nothing,
-            "low": nothing,
-            "high": nothing,
-            "grid": self.where.knots,
-            "weight": prior,
-        }
+        return RouteShares(
+            routes=ROUTES[: self.routes],
+            mean=nothing,
+            low=nothing,
+            high=nothing,
+            grid=self.where.knots,
+            weight=self.where.prior,
+            refused=reason,
+        )
 
     def _told(self, sets: list[IntArray]) -> list[RouteShares]:
         if not sets:
@@ -151,7 +147,7 @@ def fit_posterior(
     seed: int,
     pool: Pool | None = None,
     members: int = MEMBERS,
-    passes: float = PASSES,
+    steps: int = STEPS,
 ) -> SharesModel:
     """Learn the posterior from a bank; no motif's record has any part in it.
 
@@ -164,14 +160,32 @@ def fit_posterior(
     pool : Pool, optional
     members : int
         Networks whose densities are averaged.
-    passes : float
-        Times each snapshot is seen by each network.
+    steps : int
+        Steps of each network's training.
     """
-    name = f"model-{seed}-{members}-{passes:g}"
-    if bank.entry is not None:
-        found = bank.entry.read(name)
-        if found is not None:
-            return _from_arrays(bank, found)
+    name = f"model-{seed}-{members}-{steps}"
+    found = None if bank.entry is None else bank.entry.read(name)
+    if found is None:
+        found = _learnt(bank, seed=seed, pool=pool or ThreadPool(), members=members, steps=steps)
+        if bank.entry is not None:
+            bank.entry.write(name, found)
+    for array in found.values():
+        array.flags.writeable = False
+    return SharesModel(
+        map=bank.map,
+        routes=bank.routes,
+        largest=bank.largest,
+        scale=Scale(found["knots"], found["centre"], found["gain"]),
+        ensemble=Ensemble(found["sizes"], found["parameters"]),
+        sharpness=found["sharpness"],
+        width=found["width"],
+    )
+
+
+def _learnt(
+    bank: Bank, *, seed: int, pool: Pool, members: int, steps: int
+) -> dict[str, npt.NDArray[Any]]:
+    """Train on nine walks of ten, recalibrate on the tenth; the model as plain arrays."""
     where = simplex(bank.routes)
     kept = bank.weight > 0.0
     holders = bank.counts[kept]
@@ -181,45 +195,35 @@ def fit_posterior(
     knots = holder_knots(int(holders.min()), int(holders.max()))
     scale = fit_scale(values, holders, weight, knots)
     inputs = scale.apply(values, holders)
-    del values
     around, factors = where.density_factors(bank.shares[walk_of])
-    out = walk_of % HELD_OUT == HELD_OUT - 1
+    # Split by walk: the snapshots of one walk are not independent.
+    out = walk_of % HELD_OUT == HELD_OUT - 1 if bank.walks >= HELD_OUT else walk_of >= 0
+    use = ~out if bank.walks >= HELD_OUT else out
     lessons = Lessons(
-        inputs[~out], around[~out], factors[~out].astype(np.float32), _evened(weight[~out])
+        inputs[use],
+        around[use],
+        factors[use].astype(np.float32),
+        np.asarray(weight[use] / weight[use].mean()),
     )
-    ensemble = train(
-        lessons, where, seed=seed, members=members, passes=passes, pool=pool or ThreadPool()
+    ensemble = train(lessons, where, seed=seed, members=members, steps=steps, pool=pool)
+    check = HeldOut(
+        ensemble.weights(inputs[out]), around[out], factors[out], holders[out], weight[out]
     )
-    if not out.any():
-        out = ~out
-    raw = ensemble.weights(inputs[out])
-    checked = (holders[out], weight[out], knots)
-    sharp = _sharpness(raw, where, around[out], factors[out], *checked)
-    told = sharpened(raw, where.prior, _at(sharp, holders[out], knots))
-    model = SharesModel(
-        map=bank.map,
-        routes=bank.routes,
-        largest=bank.largest,
-        scale=scale,
-        ensemble=ensemble,
-        sharpness=sharp,
-        width=_width(told, where, *checked),
-    )
-    if bank.entry is not None:
-        bank.entry.write(name, _to_arrays(model))
-    return model
+    sharpness = check.sharpness(where, knots)
+    return {
+        "knots": knots,
+        "centre": scale.centre,
+        "gain": scale.gain,
+        "sizes": ensemble.sizes,
+        "parameters": ensemble.parameters,
+        "sharpness": sharpness,
+        "width": check.width(where, knots, sharpness),
+    }
 
 
 def route_shares(bank: Bank, holder_sets: Sequence[IntArray], *, seed: int) -> list[RouteShares]:
     """Fit the posterior and apply it: see :func:`fit_posterior`, :meth:`SharesModel.posterior`."""
     return fit_posterior(bank, seed=seed).posterior(holder_sets)
-
-
-def sharpened(weight: FloatArray, prior: FloatArray, power: FloatArray) -> FloatArray:
-    """Raise densities to a power: ``prior (weight / prior) ** power``, summing to 1."""
-    log = np.log(np.maximum(weight, 1e-30) / prior) * power[:, None]
-    out = prior * np.exp(log - log.max(axis=1, keepdims=True))
-    return np.asarray(out / out.sum(axis=1, keepdims=True))
 
 
 def means(weight: FloatArray, where: Simplex) -> FloatArray:
@@ -236,99 +240,3 @@ def _checked(held: IntArray, n: int) -> IntArray:
             f"A holder set must hold tradition indices from 0 to {n - 1}, each once, got {held!r}."
         )
     return out.astype(np.int32)
-
-
-def _at(values: FloatArray, holders: npt.ArrayLike, knots: FloatArray) -> FloatArray:
-    log = np.log(np.maximum(np.asarray(holders, dtype=np.float64), 1.0))
-    return np.asarray(np.interp(log, knots, values))
-
-
-def _evened(weight: FloatArray) -> FloatArray:
-    return np.asarray(weight / weight.mean())
-
-
-def _window(
-    holders: npt.NDArray[np.int32], weight: FloatArray, knots: FloatArray, q: int
-) -> tuple[npt.NDArray[np.intp], FloatArray]:
-    """Rows around knot q and their weights (falling to 0 at the neighbouring knots)."""
-    left, inside = hats(np.log(holders.astype(np.float64)), knots)
-    part = np.where(left == q, 1.0 - inside, np.where(left + 1 == q, inside, 0.0)) * weight
-    rows = np.flatnonzero(part)
-    return rows, part[rows]
-
-
-def _sharpness(
-    raw: FloatArray,
-    where: Simplex,
-    around: npt.NDArray[np.int64],
-    factors: FloatArray,
-    holders: npt.NDArray[np.int32],
-    weight: FloatArray,
-    knots: FloatArray,
-) -> FloatArray:
-    """Power at each knot that gives held-out walks the highest density (temperature scaling)."""
-    out = np.ones(len(knots))
-    for q in range(len(knots)):
-        rows, part = _window(holders, weight, knots, q)
-        if len(rows) < 100:
-            continue
-
-        def cost(power: float, rows: npt.NDArray[np.intp] = rows, part: FloatArray = part) -> float:
-            told = sharpened(raw[rows], where.prior, np.full(len(rows), power))
-            density = (np.take_along_axis(told, around[rows], axis=1) * factors[rows]).sum(axis=1)
-            return -float(np.sum(part * np.log(np.maximum(density, 1e-30))) / part.sum())
-
-        best = minimize_scalar(cost, bounds=(0.5, 1.5), method="bounded", options={"xatol": 1e-3})
-        out[q] = float(best.x)
-    out.flags.writeable = False
-    return out
-
-
-def _width(
-    weight: FloatArray,
-    where: Simplex,
-    holders: npt.NDArray[np.int32],
-    importance: FloatArray,
-    knots: FloatArray,
-) -> FloatArray:
-    """Mean width of the 90 % intervals over the prior's, at each knot."""
-    prior_low, prior_high = where.intervals(where.prior[None, :])
-    prior = float((prior_high - prior_low).mean())
-    out = np.ones(len(knots))
-    for q in range(len(knots)):
-        rows, part = _window(holders, importance, knots, q)
-        # A few hundred rows give the mean within a percent.
-        rows, part = rows[:600], part[:600]
-        if len(rows) == 0:
-            continue
-        low, high = where.intervals(weight[rows])
-        out[q] = float(np.sum(part * (high - low).mean(axis=1)) / part.sum()) / prior
-    out.flags.writeable = False
-    return out
-
-
-def _to_arrays(model: SharesModel) -> dict[str, npt.NDArray[np.generic]]:
-    return {
-        "knots": model.scale.knots,
-        "centre": model.scale.centre,
-        "gain": model.scale.gain,
-        "sizes": model.ensemble.sizes,
-        "parameters": model.ensemble.parameters,
-        "sharpness": model.sharpness,
-        "width": model.width,
-    }
-
-
-def _from_arrays(bank: Bank, found: dict[str, npt.NDArray[np.generic]]) -> SharesModel:
-    for array in found.values():
-        array.flags.writeable = False
-    a: dict[str, npt.NDArray[np.float64]] = found  # type: ignore[assignment]
-    return SharesModel(
-        map=bank.map,
-        routes=bank.routes,
-        largest=bank.largest,
-        scale=Scale(a["knots"], a["centre"], a["gain"]),
-        ensemble=Ensemble(found["sizes"], found["parameters"]),  # type: ignore[arg-type]
-        sharpness=a["sharpness"],
-        width=a["width"],
-    )
