@@ -187,6 +187,14 @@ def test_plan_may_name_columns(sound, put, tmp_path):
     assert list(catalogue.covariates) == ["rain"]
 
 
+def test_usual_name_of_a_column_asks_for_nothing(sound, put, tmp_path):
+    rules = CatalogueRules(effort="effort", family="family", branch="branch", region="region")
+    path = put(sound, tmp_path / "a")
+    assert read_catalogue(path, rules).digest() == read_catalogue(path).digest()
+    sound["traditions"] = [row[:5] for row in sound["traditions"]]
+    assert read_catalogue(put(sound, tmp_path / "b"), rules).effort is None
+
+
 def test_labels_are_carried_verbatim(sound, tmp_path):
     sound["traditions"][0].append("label")
     for row in sound["traditions"][1:]:

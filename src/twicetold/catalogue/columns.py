@@ -69,8 +69,8 @@ def asked_columns(table: Table, found: dict[str, int], asked: Mapping[str, str])
     """Put the columns that the plan names for a part in place of the usual ones."""
     folded = {name.casefold(): k for k, name in enumerate(table.header) if name}
     for part, name in asked.items():
-        if not name:
-            continue
+        if not name or name.casefold() == part:
+            continue  # the usual name asks for nothing: the column may be there or not
         if name.casefold() in folded:
             found[part] = folded[name.casefold()]
             continue

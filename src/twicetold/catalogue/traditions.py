@@ -17,7 +17,13 @@ from twicetold.catalogue.cells import (
     optional_text,
     warn_formula,
 )
-from twicetold.catalogue.columns import Columns, misspelt_access, row_access, unnamed_access
+from twicetold.catalogue.columns import (
+    TRADITION_PARTS,
+    Columns,
+    misspelt_access,
+    row_access,
+    unnamed_access,
+)
 from twicetold.catalogue.model import FloatArray
 from twicetold.catalogue.notes import Spot, shown, suggestion
 from twicetold.catalogue.rules import CatalogueRules
@@ -77,7 +83,12 @@ def read_traditions(table: Table, columns: Columns, rules: CatalogueRules) -> Tr
     hidden: set[str] = set()
     kept: dict[str, Tradition] = {}
     used = set(columns.values())
-    spare = [k for k, name in enumerate(table.header) if k not in used and name]
+    taken = {name for names in TRADITION_PARTS.values() for name in names}
+    spare = [
+        k
+        for k, name in enumerate(table.header)
+        if k not in used and name and name.casefold() not in taken
+    ]
     for chunk in table.chunks():
         if unnamed_access(table, chunk, columns):
             return None
