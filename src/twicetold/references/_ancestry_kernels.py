@@ -1,0 +1,374 @@
+"""Compiled draws of the ancestry-only world; `_ancestry_plain.py` says the same readably.
+
+A draw rings one exponential clock per tradition (one uniform number per tradition, in order,
+whichever motifs are asked for). Inside a stratum the holders of a motif are the first to ring, so
+one draw serves every motif.
+
+``count_shared`` serves motifs that share their rates, all at once: the traditions at place r of a
+stratum's order are held by exactly those motifs with more than r holders in it. With one bit per
+motif, the joins of all motifs are the column sums of (row of one end AND row of the other) over
+the edges, added with carry-save adders (Harley & Seal; see Warren 2012, Hacker's Delight 5-1).
+
+``count_own`` serves motifs that bring rates of their own for their holders.
+"""
+
+from __future__ import annotations
+
+import math
+
+import numba as nb
+import numpy as np
+
+from twicetold._sfc64 import next_double, seed_state
+
+#: Up to this many places an order is kept by insertion; beyond, the stratum is sorted.
+_INSERT = 48
+
+
+@nb.njit(nogil=True, cache=True)
+def _first(key, first, last, cap, member, best):  # type: ignore[no-untyped-def]
+    """Put the ``cap`` members of ``member[first:last]`` that ring first into ``best``, in order."""
+    size = last - first
+    if cap > _INSERT:
+        order = np.argsort(key[first:last])
+        for r in range(cap):
+            best[r] = member[first + order[r]]
+        return
+    filled = 0
+    worst = np.inf
+    place = np.empty(cap + 1, dtype=np.int64)
+    for i in range(size):
+        k = key[first + i]
+        if filled == cap and k >= worst:
+            continue
+        j = filled if filled < cap else cap - 1
+        while j > 0 and key[first + place[j - 1]] > k:
+            place[j] = place[j - 1]
+            j -= 1
+        place[j] = i
+        if filled < cap:
+            filled += 1
+        worst = key[first + place[filled - 1]]
+    for r in range(cap):
+        best[r] = member[first + place[r]]
+
+
+@nb.njit(nogil=True, cache=True)
+def _ring(uniform, rate):  # type: ignore[no-untyped-def]
+    """Time at which a clock of this rate rings; never for rate 0."""
+    if rate <= 0.0:
+        return np.inf
+    return -math.log1p(-uniform) / rate
+
+
+@nb.njit(nogil=True, cache=True)
+def _clocks(word, rate, strata, caps, uniform, key):  # type: ignore[no-untyped-def]
+    """Fill ``uniform`` (by tradition) and ``key`` (ringing times, by place in ``member``)."""
+    start, member = strata
+    state = np.empty(4, dtype=np.uint64)
+    seed_state(state, word[0], word[1], word[2])
+    for v in range(len(rate)):
+        uniform[v] = next_double(state)
+    for s in range(len(start) - 1):
+        if caps[s] == 0:
+            continue
+        for i in range(start[s], start[s + 1]):
+            key[i] = _ring(uniform[member[i]], rate[member[i]])
+
+
+@nb.njit(nogil=True, cache=True)
+def count_shared(words, rate, strata, caps, edges, table, hist):  # type: ignore[no-untyped-def]
+    """Add one count per draw and motif to ``hist``.
+
+    Parameters
+    ----------
+    words : (D, 3) uint64
+    rate : (n,) float64
+    strata : (start (S + 1,), member (n,)) int64
+    caps : (S,) int64, most holders any motif has in the stratum
+    edges : (A, 2) int64, both ends in strata with caps > 0
+    table : (row_start (S,), bits (R + 1, W) uint64, span (R + 1,), hist_start (M + 1,))
+        ``bits[row_start[s] + r]``: the motifs with more than r holders in s; the last row is
+        empty; ``span`` is the number of leading words that hold any bit.
+    hist : (hist_start[M],) int64
+    """
+    start, member = strata
+    row_start, bits, span, hist_start = table
+    n, n_edges, width = len(rate), len(edges), bits.shape[1]
+    n_motifs = len(hist_start) - 1
+    depth = 4
+    while (1 << depth) <= n_edges:
+        depth += 1
+    planes = np.zeros((depth, width), dtype=np.uint64)
+    carry = np.empty(width, dtype=np.uint64)
+    empty = bits.shape[0] - 1
+    uniform = np.empty(n)
+    key = np.empty(n)
+    best = np.empty(n, dtype=np.int64)
+    row = np.full(n, empty, dtype=np.int64)
+    left = np.empty(n_edges + 8, dtype=np.int64)
+    right = np.empty(n_edges + 8, dtype=np.int64)
+    one = np.uint64(1)
+    for d in range(len(words)):
+        _clocks(words[d], rate, strata, caps, uniform, key)
+        for s in range(len(start) - 1):
+            if caps[s] == 0:
+                continue
+            for i in range(start[s], start[s + 1]):
+                row[member[i]] = empty
+            _first(key, start[s], start[s + 1], caps[s], member, best)
+            for r in range(caps[s]):
+                row[best[r]] = row_start[s] + r
+        kept = 0
+        for e in range(n_edges):
+            a, b = row[edges[e, 0]], row[edges[e, 1]]
+            if a != empty and b != empty:
+                left[kept] = a
+                right[kept] = b
+                kept += 1
+        for extra in range(8):
+            left[kept + extra] = empty
+            right[kept + extra] = empty
+        planes[:] = 0
+        for base in range(0, kept, 8):
+            top = 0
+            for e in range(base, base + 8):
+                top = max(top, min(span[left[e]], span[right[e]]))
+            a0, b0 = left[base], right[base]
+            a1, b1 = left[base + 1], right[base + 1]
+            a2, b2 = left[base + 2], right[base + 2]
+            a3, b3 = left[base + 3], right[base + 3]
+            a4, b4 = left[base + 4], right[base + 4]
+            a5, b5 = left[base + 5], right[base + 5]
+            a6, b6 = left[base + 6], right[base + 6]
+            a7, b7 = left[base + 7], right[base + 7]
+            for w in range(top):
+                ones, twos, fours = planes[0, w], planes[1, w], planes[2, w]
+                x, y = bits[a0, w] & bits[b0, w], bits[a1, w] & bits[b1, w]
+                u = x ^ y
+                t0 = (x & y) | (u & ones)
+                ones ^= u
+                x, y = bits[a2, w] & bits[b2, w], bits[a3, w] & bits[b3, w]
+                u = x ^ y
+                t1 = (x & y) | (u & ones)
+                ones ^= u
+                u = t0 ^ t1
+                f0 = (t0 & t1) | (u & twos)
+                twos ^= u
+                x, y = bits[a4, w] & bits[b4, w], bits[a5, w] & bits[b5, w]
+                u = x ^ y
+                t0 = (x & y) | (u & ones)
+                ones ^= u
+                x, y = bits[a6, w] & bits[b6, w], bits[a7, w] & bits[b7, w]
+                u = x ^ y
+                t1 = (x & y) | (u & ones)
+                ones ^= u
+                u = t0 ^ t1
+                f1 = (t0 & t1) | (u & twos)
+                twos ^= u
+                u = f0 ^ f1
+                carry[w] = (f0 & f1) | (u & fours)
+                planes[0, w] = ones
+                planes[1, w] = twos
+                planes[2, w] = fours ^ u
+            for p in range(3, depth):
+                going = np.uint64(0)
+                for w in range(top):
+                    c = carry[w]
+                    held = planes[p, w]
+                    planes[p, w] = held ^ c
+                    carry[w] = held & c
+                    going |= held & c
+                if going == 0:
+                    break
+        for w in range(width):
+            used = depth
+            while used > 0 and planes[used - 1, w] == 0:
+                used -= 1
+            last = min(64, n_motifs - 64 * w)
+            for b in range(last):
+                total = 0
+                for p in range(used):
+                    total |= np.int64((planes[p, w] >> np.uint64(b)) & one) << p
+                hist[hist_start[64 * w + b] + total] += 1
+
+
+@nb.njit(nogil=True, cache=True)
+def _sort_pairs(time, holder, first, size, who):  # type: ignore[no-untyped-def]
+    """Sort ``time[:size]`` and put ``holder[first : first + size]`` into ``who`` in that order."""
+    if size > _INSERT:
+        order = np.argsort(time[:size])
+        time[:size] = time[:size][order]
+        for i in range(size):
+            who[i] = holder[first + order[i]]
+        return
+    for i in range(size):
+        t = time[i]
+        j = i
+        while j > 0 and time[j - 1] > t:
+            time[j] = time[j - 1]
+            who[j] = who[j - 1]
+            j -= 1
+        time[j] = t
+        who[j] = holder[first + i]
+
+
+@nb.njit(nogil=True, cache=True)
+def _merge(part, common, own, buffers, chosen):  # type: ignore[no-untyped-def]
+    """Put into ``chosen`` the first to ring when the motif's holders ring at their own rates."""
+    holder, first, size = part
+    order, when, begin, stop = common
+    time, who, mine, stamp = buffers
+    for i in range(size):
+        mine[holder[first + i]] = stamp
+        time[i] = own[first + i]
+    _sort_pairs(time, holder, first, size, who)
+    i, other = 0, begin
+    for k in range(size):
+        while other < stop and mine[order[other]] == stamp:
+            other += 1
+        if other < stop and (i == size or when[other] < time[i]):
+            chosen[k] = order[other]
+            other += 1
+        else:
+            chosen[k] = who[i]
+            i += 1
+
+
+@nb.njit(nogil=True, cache=True)
+def count_own(words, rate, strata, caps, later, motifs, hist):  # type: ignore[no-untyped-def]
+    """Add one count per draw and motif to ``hist``; holders ring at their motif's own rates.
+
+    A group's holders differ from the common order's first ones only if one of those is a holder
+    whose own, slower clock rings after the next in line; only then are the two orders merged.
+
+    Parameters
+    ----------
+    words, rate, strata, hist
+        As in :func:`count_shared`.
+    caps : (S,) int64
+        At least min(size of the stratum, twice the most holders any motif has in it).
+    later : (indptr (n + 1,), indices (A,)) int64
+        Neighbours with a higher number than the tradition itself, for the edges counted.
+    motifs : (part_start (M + 1,), part_stratum (P,), holder_start (P + 1,), holder (H,), own (H,),
+              shrink (n,), hist_start (M + 1,))
+        The motif's holders by stratum ("parts") and their own rates; ``shrink`` is the least
+        own rate over common rate at a tradition, 0 where some own rate is above the common one.
+    """
+    start, member = strata
+    indptr, indices = later
+    part_start, part_stratum, holder_start, holder, own, shrink, hist_start = motifs
+    n = len(rate)
+    uniform, key = np.empty(n), np.empty(n)
+    order = np.empty(n, dtype=np.int64)
+    wait, when, late = np.empty(n), np.empty(n), np.empty(n)
+    time, who = np.empty(n), np.empty(n, dtype=np.int64)
+    theirs = np.empty(len(holder))
+    chosen = np.empty(n, dtype=np.int64)
+    held = np.zeros(n, dtype=np.int64)
+    mine = np.zeros(n, dtype=np.int64)
+    stamp = 0
+    for d in range(len(words)):
+        _clocks(words[d], rate, strata, caps, uniform, key)
+        for s in range(len(start) - 1):
+            if caps[s] > 0:
+                for i in range(start[s], start[s + 1]):
+                    wait[member[i]] = _ring(uniform[member[i]], 1.0)
+                _first(key, start[s], start[s + 1], caps[s], member, order[start[s] :])
+                for i in range(start[s], start[s] + caps[s]):
+                    v = order[i]
+                    when[i] = wait[v] / rate[v]
+                    late[i] = when[i] / shrink[v] if shrink[v] > 0.0 else np.inf
+        for m in range(len(part_start) - 1):
+            stamp += 1
+            k = 0
+            for q in range(part_start[m], part_start[m + 1]):
+                s = part_stratum[q]
+                first = holder_start[q]
+                size = holder_start[q + 1] - first
+                begin = start[s]
+                apart = False
+                if begin + size < start[s + 1]:
+                    limit = when[begin + size]
+                    for i in range(size):
+                        chosen[k + i] = order[begin + i]
+                        apart |= late[begin + i] > limit
+                else:
+                    for i in range(size):
+                        chosen[k + i] = member[begin + i]
+                if apart:
+                    for i in range(first, first + size):
+                        theirs[i] = wait[holder[i]] / own[i]
+                    _merge(
+                        (holder, first, size),
+                        (order, when, begin, begin + caps[s]),
+                        theirs,
+                        (time, who, mine, stamp),
+                        chosen[k:],
+                    )
+                k += size
+            for i in range(k):
+                held[chosen[i]] = stamp
+            joins = 0
+            for i in range(k):
+                v = chosen[i]
+                for e in range(indptr[v], indptr[v + 1]):
+                    if held[indices[e]] == stamp:
+                        joins += 1
+            hist[hist_start[m] + joins] += 1
+
+
+@nb.njit(nogil=True, cache=True)
+def enumerate_joins(fixed, later, groups, hist):  # type: ignore[no-untyped-def]
+    """Add the weight of every configuration to ``hist`` by its joins.
+
+    Parameters
+    ----------
+    fixed : (F,) int64
+        Holders that never move.
+    later : (indptr, indices)
+        As in :func:`count_own`.
+    groups : (size (G,), set_start (G + 1,), member_start (G,), member (K,), weight (sum of sets,))
+        Group g has sets ``set_start[g]:set_start[g + 1]`` of ``size[g]`` members each.
+    hist : (largest joins + 1,) float64
+    """
+    indptr, indices = later
+    size, set_start, member_start, member, weight = groups
+    n_groups = len(size)
+    held = np.zeros(len(indptr) - 1, dtype=np.int64)
+    total = len(fixed)
+    for g in range(n_groups):
+        total += size[g]
+    chosen = np.empty(total, dtype=np.int64)
+    digit = np.zeros(n_groups, dtype=np.int64)
+    stamp = 0
+    while True:
+        stamp += 1
+        k = 0
+        for i in range(len(fixed)):
+            chosen[k] = fixed[i]
+            k += 1
+        w = 1.0
+        for g in range(n_groups):
+            w *= weight[set_start[g] + digit[g]]
+            at = member_start[g] + digit[g] * size[g]
+            for i in range(size[g]):
+                chosen[k] = member[at + i]
+                k += 1
+        for i in range(k):
+            held[chosen[i]] = stamp
+        joins = 0
+        for i in range(k):
+            for e in range(indptr[chosen[i]], indptr[chosen[i] + 1]):
+                if held[indices[e]] == stamp:
+                    joins += 1
+        hist[joins] += w
+        g = 0
+        while g < n_groups:
+            digit[g] += 1
+            if digit[g] < set_start[g + 1] - set_start[g]:
+                break
+            digit[g] = 0
+            g += 1
+        if g == n_groups:
+            return
