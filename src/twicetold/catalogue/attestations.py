@@ -15,7 +15,7 @@ from twicetold.catalogue.columns import Columns
 from twicetold.catalogue.model import CellState, IntArray
 from twicetold.catalogue.motifs import MotifRows
 from twicetold.catalogue.notes import Spot, near, shown, suggestion
-from twicetold.catalogue.tables import Chunk, Table
+from twicetold.catalogue.tables import Chunk, Table, unburdened
 from twicetold.catalogue.traditions import HIDDEN, TraditionRows
 
 UNKNOWN: Final = -1
@@ -74,7 +74,7 @@ def read_pairs(
     log = CellLog(table.file)
     if star:
         motifs.index[EVERY_MOTIF] = STAR
-    for chunk in table.chunks():
+    for chunk in unburdened(table.chunks()):
         motif = _codes(chunk, columns["motif"], motifs.index)
         tradition = _codes(chunk, columns["tradition"], traditions.index)
         if (motif == UNKNOWN).any() or (tradition == UNKNOWN).any():

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import codecs
 import csv
+import gc
 import hashlib
 import io
 from collections.abc import Callable, Generator, Iterator
@@ -107,6 +108,20 @@ class Table:
             kept.append(record)
             numbers.append(number)
         return kept, np.asarray(numbers, dtype=np.int32)
+
+
+def unburdened(chunks: Iterator[Chunk]) -> Iterator[Chunk]:
+    """The same chunks, read with the search for reference cycles paused.
+
+    Rows of text hold no cycles, and the search over millions of them takes two fifths of the time.
+    """
+    was_on = gc.isenabled()
+    gc.disable()
+    try:
+        yield from chunks
+    finally:
+        if was_on:
+            gc.enable()
 
 
 @dataclass(frozen=True)

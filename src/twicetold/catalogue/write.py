@@ -17,7 +17,7 @@ from twicetold.catalogue.model import Catalogue, CellState, SourceFile
 from twicetold.errors import CatalogueError, Problem
 
 _BUFFER = 1 << 16
-_STATE_WORD = {
+_STATE_WORD: dict[int, str] = {
     CellState.ATTESTED: "",
     CellState.NOT_SEARCHED: "not searched",
     CellState.NOT_APPLICABLE: "not applicable",
@@ -87,7 +87,7 @@ def normalised(catalogue: Catalogue) -> Iterator[tuple[str, Iterator[str]]]:
     yield "about.toml", _about(catalogue)
     yield "traditions.csv", _csv(_tradition_rows(catalogue))
     yield "motifs.csv", _csv(_motif_rows(catalogue))
-    yield "attestations.csv", _csv(_attestation_rows(catalogue))
+    yield "attestations.csv", _attestations(catalogue)
     if any(_listing(catalogue)):
         yield "surveyed.csv", _csv(_surveyed_rows(catalogue))
     if catalogue.contacts is not None:
@@ -139,8 +139,7 @@ def _tradition_rows(catalogue: Catalogue) -> Iterator[list[str]]:
     columns += ["effort"] if catalogue.effort is not None else []
     yield [*columns, "access", "label", *catalogue.covariates]
     blank = [""] * (len(columns) - 1)
-    rows = list(range(catalogue.n_traditions))
-    for i in rows:
+    for i in range(catalogue.n_traditions):
         row = [
             catalogue.tradition_ids[i],
             catalogue.tradition_names[i],
@@ -171,17 +170,29 @@ def _motif_rows(catalogue: Catalogue) -> Iterator[list[str]]:
         yield list(row)
 
 
-def _attestation_rows(catalogue: Catalogue) -> Iterator[list[str]]:
-    yield ["motif_id", "tradition_id", "state"]
-    ids = catalogue.tradition_ids
+def _attestations(catalogue: Catalogue) -> Iterator[str]:
+    """One piece of text a motif; ids are quoted once, since there may be millions of rows."""
+    yield "motif_id,tradition_id,state\n"
+    ids = _quoted(catalogue.tradition_ids)
     listed = _listing(catalogue)
-    for k, motif in enumerate(catalogue.motif_ids):
+    everybody = [bool(mask.all()) for mask in catalogue.surveyed_sets]
+    for k, motif in enumerate(_quoted(catalogue.motif_ids)):
+        if everybody[int(catalogue.surveyed_of[k])]:  # then no cell can be "not applicable"
+            yield "".join([f"{motif},{ids[i]},\n" for i in catalogue.holders(k).tolist()])
+            continue
         states = catalogue.states(k)
         chosen = (states == CellState.ATTESTED) | (states == CellState.NOT_APPLICABLE)
         if not listed[int(catalogue.surveyed_of[k])]:
             chosen |= states == CellState.NOT_SEARCHED
-        for i in np.flatnonzero(chosen).tolist():
-            yield [motif, ids[i], _STATE_WORD[CellState(int(states[i]))]]
+        places = np.flatnonzero(chosen)
+        words = map(_STATE_WORD.__getitem__, states[places].tolist())
+        pairs = zip(places.tolist(), words, strict=True)
+        yield "".join([f"{motif},{ids[i]},{word}\n" for i, word in pairs])
+
+
+def _quoted(texts: Iterable[str]) -> list[str]:
+    """Texts as cells of a CSV row."""
+    return [next(_csv([[text, ""]])).removesuffix(",\n") for text in texts]
 
 
 def _listing(catalogue: Catalogue) -> list[bool]:
