@@ -16,17 +16,27 @@ import numba as nb
 import numpy as np
 import numpy.typing as npt
 
-_DOUBLE = 1.0 / 9007199254740992.0  # 2**-53
+DOUBLE = 1.0 / 9007199254740992.0  # 2**-53
+
+
+@nb.njit(nogil=True, cache=True)
+def step(a, b, c, counter):  # type: ignore[no-untyped-def]
+    """Give the next uint64 and the four words after it (for loops that keep them in registers)."""
+    out = a + b + counter
+    turned = (c << np.uint64(24)) | (c >> np.uint64(40))
+    return (
+        out,
+        b ^ (b >> np.uint64(11)),
+        c + (c << np.uint64(3)),
+        turned + out,
+        counter + np.uint64(1),
+    )
 
 
 @nb.njit(nogil=True, cache=True)
 def next_u64(state):  # type: ignore[no-untyped-def]
     """Advance ``state`` ((4,) uint64) and give the next uint64."""
-    out = state[0] + state[1] + state[3]
-    state[3] += np.uint64(1)
-    state[0] = state[1] ^ (state[1] >> np.uint64(11))
-    state[1] = state[2] + (state[2] << np.uint64(3))
-    state[2] = ((state[2] << np.uint64(24)) | (state[2] >> np.uint64(40))) + out
+    out, state[0], state[1], state[2], state[3] = step(state[0], state[1], state[2], state[3])
     return out
 
 
@@ -44,7 +54,7 @@ def seed_state(state, w0, w1, w2):  # type: ignore[no-untyped-def]
 @nb.njit(nogil=True, cache=True)
 def next_double(state):  # type: ignore[no-untyped-def]
     """Give a uniform double in [0, 1), a multiple of 2**-53."""
-    return np.float64(next_u64(state) >> np.uint64(11)) * _DOUBLE
+    return np.float64(next_u64(state) >> np.uint64(11)) * DOUBLE
 
 
 @nb.njit(nogil=True, cache=True)

@@ -32,7 +32,7 @@ class Engine(NamedTuple):
     draws: int
     arrays: tuple[npt.NDArray[np.int32], ...]
     weights: Floats
-    table: tuple[npt.NDArray[np.int32], Floats, npt.NDArray[np.int32], float]
+    table: tuple[npt.NDArray[np.int32], Floats, npt.NDArray[np.int32]]
     column: npt.NDArray[np.int32]
     start: npt.NDArray[np.int64]
     thresholds: npt.NDArray[np.int64]
@@ -92,12 +92,12 @@ def check_draws(draws: int) -> None:
         raise TwicetoldError(f"`draws` must be a whole number from 1 up, got {draws}.")
 
 
-def table_of(weights: Floats) -> tuple[npt.NDArray[np.int32], Floats, npt.NDArray[np.int32], float]:
+def table_of(weights: Floats) -> tuple[npt.NDArray[np.int32], Floats, npt.NDArray[np.int32]]:
     items = np.flatnonzero(weights > 0).astype(np.int32)
     share = np.empty(len(items))
     other, stack = np.empty_like(items), np.empty_like(items)
-    total = _kernels.alias_table(weights, items, len(items), share, other, stack)
-    return items, share, other, float(total)
+    _kernels.alias_table(weights, items, len(items), share, other, stack)
+    return items, share, other
 
 
 def make_engine(

@@ -10,13 +10,18 @@ from __future__ import annotations
 import numba as nb
 import numpy as np
 
-from twicetold._sfc64 import next_double, seed_state
+from twicetold._sfc64 import DOUBLE, seed_state, step
 from twicetold.statistics._kernels import sweep
+
+#: Candidates drawn between two looks at the table. Part of what a seed means: never change it.
+BATCH = 16
+#: Candidates wasted per tradition still in the table before it is made again. As above.
+WASTE = 2
 
 
 @nb.njit(nogil=True, cache=True)
 def alias_table(weights, items, size, share, other, stack):  # type: ignore[no-untyped-def]
-    """Fill an alias table over ``items[:size]`` and give the sum of their weights.
+    """Fill an alias table over ``items[:size]``.
 
     Column k yields ``items[k]`` when the coin falls below ``share[k]`` and ``other[k]`` else
     (Walker 1977; filled as by Vose 1991). ``stack`` is scratch of the same length.
@@ -51,16 +56,17 @@ def alias_table(weights, items, size, share, other, stack):  # type: ignore[no-u
         share[stack[k]] = 1.0
     for k in range(heavy, size):
         share[stack[k]] = 1.0
-    return total
 
 
 @nb.njit(nogil=True, cache=True)
-def draw_orders(words, weights, items0, share0, other0, total0, orders):  # type: ignore[no-untyped-def]
+def draw_orders(words, weights, items0, share0, other0, orders):  # type: ignore[no-untyped-def]
     """Draw Plackett-Luce prefixes: each next tradition in proportion to weight among the rest.
 
-    Candidates come from the alias table; those already drawn are thrown back. When the weight of
-    those not yet drawn falls below half the table's, the table is made again over them. Both steps
-    look only at what was drawn so far, so a longer prefix begins with the shorter one.
+    Candidates come from the alias table, a batch at a time; those already drawn are passed over.
+    Once a table has wasted more candidates than making a new one would cost, it is made again over
+    the traditions not yet drawn. Both steps look only at what was drawn so far, so a longer prefix
+    begins with the shorter one; and whatever the past, the next tradition to be kept is one of the
+    rest in proportion to its weight.
 
     Parameters
     ----------
@@ -70,48 +76,56 @@ def draw_orders(words, weights, items0, share0, other0, total0, orders):  # type
         Propensities, > 0 for every tradition in ``items0``.
     items0, share0, other0 : (P,) int32, float64, int32
         Alias table over the P traditions with positive propensity.
-    total0 : float64
-        Sum of their weights.
     orders : (draws, length) int32
         Filled; length <= P.
     """
     count = items0.shape[0]
+    length = orders.shape[1]
     items1 = np.empty(count, dtype=np.int32)
     share1 = np.empty(count, dtype=np.float64)
     other1 = np.empty(count, dtype=np.int32)
     stack = np.empty(count, dtype=np.int32)
+    order = np.empty(count + 1, dtype=np.int32)
+    batch = np.empty(BATCH, dtype=np.int32)
     taken = np.full(weights.shape[0], -1, dtype=np.int32)
     state = np.zeros(4, dtype=np.uint64)
     for d in range(orders.shape[0]):
         seed_state(state, words[d, 0], words[d, 1], words[d, 2])
+        s0, s1, s2, s3 = state[0], state[1], state[2], state[3]
         items = items0
         share = share0
         other = other0
         size = count
-        mass = total0
-        left = total0
-        for m in range(orders.shape[1]):
-            if left < 0.5 * mass:
+        wasted = 0
+        m = 0
+        while m < length:
+            if wasted > WASTE * size:
                 kept = 0
                 for k in range(size):
                     if taken[items[k]] != d:
                         items1[kept] = items[k]
                         kept += 1
                 size = kept
-                mass = alias_table(weights, items1, size, share1, other1, stack)
-                left = mass
+                alias_table(weights, items1, size, share1, other1, stack)
                 items = items1
                 share = share1
                 other = other1
-            while True:
-                x = next_double(state) * size
+                wasted = 0
+            for j in range(BATCH):
+                u, s0, s1, s2, s3 = step(s0, s1, s2, s3)
+                x = np.float64(np.int64(u >> np.uint64(11))) * (size * DOUBLE)
                 k = min(np.int64(x), size - 1)
-                v = items[k] if x - k < share[k] else other[k]
-                if taken[v] != d:
-                    break
-            taken[v] = d
-            left -= weights[v]
-            orders[d, m] = v
+                batch[j] = items[k] if x - k < share[k] else other[k]
+            before = m
+            for j in range(BATCH):
+                # Written always, kept if new: no branch to mispredict.
+                v = batch[j]
+                order[m] = v
+                m += 1 if taken[v] != d else 0
+                taken[v] = d
+            wasted += BATCH - (m - before)
+        for j in range(length):
+            orders[d, j] = order[j]
 
 
 @nb.njit(nogil=True, cache=True)

@@ -6,8 +6,9 @@ Plackett-Luce prefix. One draw orders the traditions and serves every number of 
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator, Mapping, Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
+from functools import cached_property
 
 import numpy as np
 import numpy.typing as npt
@@ -144,14 +145,18 @@ class EmergenceWorld:
             out[here] = p(self.law(statistic, int(count)), value[here])
         return out
 
+    @cached_property
+    def _columns(self) -> dict[int, int]:
+        drawn = [n for n in self.counts if n not in self.exact]
+        return {n: k for k, n in enumerate(drawn)}
+
     def _column(self, n: int) -> int:
-        drawn = [c for c in self.counts if c not in self.exact]
-        if n not in drawn:
+        if n not in self._columns:
             raise TwicetoldError(
                 f"The world was not drawn for {n} holders. Pass it in `counts` (now "
                 f"{len(self.counts)} counts from {self.counts[0]} to {self.counts[-1]})."
             )
-        return drawn.index(n)
+        return self._columns[n]
 
 
 def equal_propensity(n_traditions: int) -> Floats:
@@ -246,45 +251,6 @@ def emergence_world(
     return EmergenceWorld(graph, wanted, draws, exact, total, tails)
 
 
-def emergence_worlds(
-    graph: ContactGraph,
-    family_codes: npt.ArrayLike | None,
-    propensity_of: Callable[[int], npt.ArrayLike],
-    counts: Sequence[int],
-    *,
-    draws: int,
-    seed: int,
-    pool: Pool | None = None,
-    scores: Sequence[int] | None = None,
-) -> Iterator[EmergenceWorld]:
-    """One world for each motif, where every motif has propensities of its own.
-
-    World k is what :func:`emergence_world` gives for ``propensity_of(k)``, ``counts[k]`` and the
-    same seed; it costs its own sweeps, so motifs are shared out among the workers instead.
-
-    Parameters
-    ----------
-    graph : ContactGraph
-    family_codes : (N,) int or None
-    propensity_of : callable
-        Motif number to (N,) propensities.
-    counts : (M,) int
-        Number of holders of each motif.
-    draws, seed : int
-    pool : Pool or None
-    scores : (M,) int or None
-        Observed Moran scores.
-
-    Yields
-    ------
-    EmergenceWorld
-        In the order of ``counts``.
-    """
-    shared = (graph, family_codes, propensity_of, tuple(counts), draws, seed, scores)
-    keys = range(len(counts))
-    yield from (pool or ThreadPool()).run(_one_motif, shared, keys, label="emergence")
-
-
 def emergence_tails_single(
     graph: ContactGraph,
     family_codes: npt.ArrayLike | None,
@@ -295,7 +261,11 @@ def emergence_tails_single(
     seed: int,
     pool: Pool | None = None,
 ) -> dict[str, float]:
-    """P(statistic >= observed) of one motif with propensities of its own.
+    """P(statistic >= observed) of one motif that has propensities of its own.
+
+    The sweep stops at the motif's own number of holders, so a draw costs its holders' degrees and
+    nothing else. Where many motifs each need this, share the motifs out among the workers and run
+    each with ``ThreadPool(1)``.
 
     Parameters
     ----------
@@ -306,6 +276,11 @@ def emergence_tails_single(
         ``holders``, and any of ``statistics.STATISTICS`` and ``moran_score``.
     draws, seed : int
     pool : Pool or None
+
+    Raises
+    ------
+    TwicetoldError
+        As :func:`emergence_world`.
     """
     n = observed["holders"]
     score = observed.get("moran_score")
@@ -345,26 +320,3 @@ def emergence_holders(
         words = chunk_words(seed, stream, k, draws=len(part))
         _kernels.draw_orders(words, weights, *table, part)
     return out
-
-
-class _Here:
-    """A pool that runs chunks where it stands (motifs are already shared out among workers)."""
-
-    def run(self, function, shared, keys, *, label):  # type: ignore[no-untyped-def]
-        """Yield each result in turn."""
-        return (function(shared, key) for key in keys)
-
-
-def _one_motif(shared, k):  # type: ignore[no-untyped-def]
-    graph, family_codes, propensity_of, counts, draws, seed, scores = shared
-    thresholds = None if scores is None else {counts[k]: [scores[k]]}
-    return emergence_world(
-        graph,
-        family_codes,
-        propensity_of(k),
-        [counts[k]],
-        draws=draws,
-        seed=seed,
-        pool=_Here(),
-        moran_thresholds=thresholds,
-    )

@@ -33,8 +33,9 @@ def sweep(order, start, stop, column, indptr, indices, family, work, kin, epoch,
         Row of ``out`` in which the statistics of the first m traditions go, or -1.
     indptr, indices, family : int32
         Contact graph and families (0 .. F - 1).
-    work : (3, N) int32
-        Scratch: epoch mark, union-find links of clusters, degree in [2] (filled by the caller).
+    work : (4, N + 1) int32
+        Scratch: epoch mark, union-find links of clusters, degree in [2] (filled by the caller),
+        neighbours that hold.
     kin : (2, F) int32
         Scratch: epoch mark, union-find links of families.
     epoch : int32
@@ -44,9 +45,9 @@ def sweep(order, start, stop, column, indptr, indices, family, work, kin, epoch,
     scores : (K,) int64
         N * joins - n * degree sum, which orders as Moran's I does.
     """
-    mark, link, degree = work[0], work[1], work[2]
+    mark, link, degree, near = work[0], work[1], work[2], work[3]
     kin_mark, kin_link = kin[0], kin[1]
-    n_all = np.int64(mark.shape[0])
+    n_all = np.int64(indptr.shape[0] - 1)
     joins = 0
     cross = 0
     degree_sum = np.int64(0)
@@ -66,15 +67,20 @@ def sweep(order, start, stop, column, indptr, indices, family, work, kin, epoch,
             kin_link[f] = -1
             strands += 1
         degree_sum += degree[v]
-        root = v
+        # Neighbours that hold, and those of another family, are gathered without a branch.
+        met = 0
+        apart = 0
         for e in range(indptr[v], indptr[v + 1]):
             u = indices[e]
-            if mark[u] != epoch:
-                continue
-            joins += 1
-            g = family[u]
-            if g != f:
-                cross += 1
+            near[met] = u
+            held = mark[u] == epoch
+            met += 1 if held else 0
+            apart += 1 if held & (family[u] != f) else 0
+        joins += met
+        cross += apart
+        root = v
+        for j in range(met):
+            u = near[j]
             other = _root(link, u)
             if other == root:
                 continue
@@ -88,6 +94,7 @@ def sweep(order, start, stop, column, indptr, indices, family, work, kin, epoch,
             link[root] = size
             clusters -= 1
             largest = max(largest, -size)
+            g = family[u]
             if g != f:
                 # A strand is whole families, so its union-find runs over families; a join inside
                 # one cluster can never merge strands.

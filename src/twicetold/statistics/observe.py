@@ -56,8 +56,8 @@ def graph_arrays(
     graph: ContactGraph, family: npt.NDArray[np.int32]
 ) -> tuple[IntArray, IntArray, IntArray, IntArray, IntArray]:
     """Give fresh indptr, indices, family and the two scratch arrays the sweep works with."""
-    work = np.zeros((3, graph.n), dtype=np.int32)
-    work[2] = graph.degree
+    work = np.zeros((4, graph.n + 1), dtype=np.int32)
+    work[2, : graph.n] = graph.degree
     kin = np.zeros((2, int(family.max(initial=-1)) + 1), dtype=np.int32)
     return np.array(graph.indptr), np.array(graph.indices), np.array(family), work, kin
 
