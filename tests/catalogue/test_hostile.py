@@ -185,6 +185,42 @@ def test_pipes_and_devices_are_not_opened(sound, tmp_path):
     examine(folder)
 
 
+@pytest.mark.parametrize(
+    "case",
+    [
+        ("TABLE_ROWS", 4, "csv", "more than 4 rows"),
+        ("TABLE_BYTES", 100, "csv", "is larger than"),
+        ("SURVEYED_BYTES", 4, "states", "sets of traditions searched"),
+        ("MATRIX_CELLS", 10, "matrix", "more than 10 cells"),
+        ("MATRIX_CELLS", 7, "matrix.xlsx", "more than 7 cells"),
+        ("SURVEYED_BYTES", 4, "matrix", "as an attestations table"),
+        ("WORKBOOK_BYTES", 100, "xlsx", "is larger than"),
+        ("WORKBOOK_UNPACKED", 100, "xlsx", "would unpack to"),
+        ("SHEET_ROWS", 3, "xlsx", "more rows or cells"),
+        ("SHEET_CELLS", 30, "xlsx", "more rows or cells"),
+        ("METADATA_BYTES", 100, "cldf", "larger than"),
+        ("LAND_BYTES", 10, "csv", "larger than"),
+    ],
+)
+def test_each_limit_is_kept(sound, tmp_path, monkeypatch, case):
+    limit, value, form, words = case
+    monkeypatch.setattr(limits, limit, value)
+    if form == "states":
+        sound["attestations"][0][2] = "state"
+        for row, state in zip(sound["attestations"][1:], ["", "not searched"] * 3, strict=True):
+            row[2] = state
+    if form.startswith("matrix"):
+        sound = {"traditions": sound["traditions"]}
+        sound["matrix"] = [["motif_id", "t1", "t2", "t3"], ["m1", *"110"], ["m2", "1", "", "0"]]
+    if form == "cldf":
+        path = cldf(tmp_path)[0]
+    else:
+        path = (write_xlsx if form.endswith("xlsx") else write_csv)(sound, tmp_path)
+    if path.is_dir():
+        (path / "land.geojson").write_text('{"type": "FeatureCollection", "features": []}')
+    assert words in examine(path)
+
+
 # ---- CLDF metadata -------------------------------------------------------------------------
 
 TERMS = "http://cldf.clld.org/v1.0/terms.rdf#"

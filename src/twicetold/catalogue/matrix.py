@@ -120,7 +120,7 @@ def _read_by_motif(table: Table, traditions: TraditionRows, motifs: MotifRows) -
     cells_read = 0
     for chunk in table.chunks():
         cells_read += len(chunk.rows) * len(table.header)
-        if cells_read > limits.MATRIX_CELLS or harvest.sets.too_many:
+        if cells_read > limits.MATRIX_CELLS:
             _say_too_large(table)
             return None
         block = _states(table, chunk, across, codes)
@@ -131,6 +131,9 @@ def _read_by_motif(table: Table, traditions: TraditionRows, motifs: MotifRows) -
             states = np.zeros(n + len(traditions.unlocated), dtype=np.int8)
             states[codes[visible]] = block[visible, k]
             harvest.add(motif, states)
+            if harvest.sets.too_many:
+                _say_too_large(table)
+                return None
     return harvest.presence(len(motifs.ids))
 
 
