@@ -191,7 +191,7 @@ def _warning(kappa: float, low: float, mean: float) -> str:
     if kappa == 0.0 or mean < LEAST_RECORDED:
         return (
             "Row totals grow with effort without any sign of saturation: how much is still "
-            "unrecorded cannot be estimated from them. Results that hang on it should be read beside "
+            "unrecorded cannot be estimated from them. Read results that hang on it beside "
             'those under spread.recording = "complete".'
         )
     if low == 0.0:

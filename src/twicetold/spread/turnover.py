@@ -74,7 +74,7 @@ def thinned(true: FloatArray, recorded: float) -> FloatArray:
         log_p = logs[m] - logs[k] - logs[m - k]
         log_p += k * np.log(recorded) + (m - k) * np.log1p(-recorded)
         out[k] += true[m - 1] * np.exp(log_p)
-    return out / out.sum()
+    return np.asarray(out / out.sum())
 
 
 @dataclass(frozen=True)
@@ -97,8 +97,8 @@ class TurnoverFit:
         Parametric-bootstrap p-value of the goodness of fit (likelihood-ratio statistic over the
         octave classes of ``classes``); small is bad.
     dispersion : float
-        Pearson's chi-square of the classes over its degrees of freedom, at least 1; widens
-        intervals (quasi-likelihood, Wedderburn 1974).
+        Pearson's chi-square of the classes over its degrees of freedom where the fit is bad
+        (``fit_p`` at most .05), else 1; widens intervals (quasi-likelihood, Wedderburn 1974).
     classes : pandas.DataFrame
         ``from_holders, to_holders, observed, expected``.
     grid, profile : (G,) float64
@@ -213,21 +213,15 @@ def fit_turnover(
     used = held[held >= min_holders]
     left_out = int(np.sum((held > 0) & (held < min_holders)))
     if len(used) < FEWEST or min_holders == n:
-        nan = float("nan")
-        refused = (
-            f"Only {len(used)} motifs have {min_holders} holders or more; the turnover is not "
-            f"fitted from fewer than {FEWEST}. Give it as a number (spread.turnover) or lower "
-            "spread.min_holders."
-        )
-        return TurnoverFit(
-            nan, nan, nan, recorded, len(used), left_out, min_holders, n, refused=refused
-        )
+        return _refusal(n, recorded, min_holders, (len(used), left_out))
     grid, table = _likelihood_table(n, min_holders, recorded)
     observed = np.bincount(used, minlength=n + 1)[min_holders:].astype(np.float64)
     likelihood = table @ observed
     best = int(np.argmax(likelihood))
     turnover, peak = _refine(grid, likelihood, best)
-    classes, fit_p, dispersion = _goodness(observed, grid, table, turnover, min_holders, seed, samples)
+    classes, fit_p, dispersion = _goodness(
+        observed, grid, table, turnover, min_holders, seed, samples
+    )
     profile = np.minimum(likelihood - peak, 0.0)
     low, high = profile_interval(grid, profile, float(stats.chi2.ppf(0.95, 1)) * dispersion)
     for array in (grid, profile):
@@ -248,6 +242,16 @@ def fit_turnover(
         profile=profile,
         warning=_warning(len(used), fit_p, classes, high, n),
     )
+
+
+def _refusal(n: int, recorded: float, min_holders: int, motifs: tuple[int, int]) -> TurnoverFit:
+    nan = float("nan")
+    refused = (
+        f"Only {motifs[0]} motifs have {min_holders} holders or more; the turnover is not "
+        f"fitted from fewer than {FEWEST}. Give it as a number (spread.turnover) or lower "
+        "spread.min_holders."
+    )
+    return TurnoverFit(nan, nan, nan, recorded, *motifs, min_holders, n, refused=refused)
 
 
 def _likelihood_table(n: int, least: int, recorded: float) -> tuple[FloatArray, FloatArray]:
@@ -336,7 +340,9 @@ def _goodness(  # noqa: PLR0917
     pooled_seen, pooled_expected = _pool(seen, expected, 5.0)
     freedom = len(pooled_seen) - 2
     pearson = float(np.sum((pooled_seen - pooled_expected) ** 2 / pooled_expected))
-    dispersion = max(1.0, pearson / freedom) if freedom >= 1 else 1.0
+    # A fit that holds needs no widening: the ratio would then only add noise of its own.
+    bad = fit_p <= 0.05 and freedom >= 1
+    dispersion = max(1.0, pearson / freedom) if bad else 1.0
     classes = pd.DataFrame(
         {"from_holders": starts, "to_holders": ends, "observed": seen, "expected": expected}
     )

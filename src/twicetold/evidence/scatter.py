@@ -1,0 +1,307 @@
+"""Is a motif more scattered than contact, or transmission of any kind, would leave it?
+
+*Contact-only*: every gain by contact. *Transmission-only*: contact and inheritance in any
+proportion (a grid of inheritance shares); no second invention unless nobody is left to tell it to.
+Both p-values are the worst case over what the fits leave open (:mod:`.confidence`), and the second
+over the inheritance share as well. Many strands is the primary measure of scatter against
+transmission, few joins against contact (which knows no families); each stands beside the other.
+
+Weighted draws become a p by :mod:`twicetold.references.pvalue`: their share times their effective
+number, the observed motif counting as one effective draw more.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass, field, replace
+from typing import Literal
+
+import numpy as np
+import numpy.typing as npt
+
+from twicetold.evidence.confidence import ConfidenceSet, Point
+from twicetold.evidence.results import Comparison
+from twicetold.graph import ContactGraph
+from twicetold.references.law import Law
+from twicetold.references.pvalue import p_few, p_many
+from twicetold.spread.chain import SpreadModel
+from twicetold.spread.world import SpreadWorld, spread_world
+from twicetold.workers import Pool
+
+FloatArray = npt.NDArray[np.float64]
+IntArray = npt.NDArray[np.int32]
+World = Literal["contact", "transmission"]
+
+#: Inheritance shares over which transmission-only takes its worst case.
+INHERITANCE = (0.0, 0.25, 0.5, 0.75, 1.0)
+#: Reweighting to another turnover must keep this part of the effective draws; else it is walked.
+KEEP = 0.25
+#: World -> (statistic, direction), the primary one first.
+MEASURES: dict[World, tuple[tuple[str, Literal["many", "few"]], ...]] = {
+    "contact": (("joins", "few"), ("strands", "many")),
+    "transmission": (("strands", "many"), ("joins", "few")),
+}
+
+
+@dataclass(frozen=True)
+class Transmission:
+    """What the worlds without a second invention are made of.
+
+    Parameters
+    ----------
+    graph : ContactGraph
+        Over the surveyed traditions.
+    confidence : ConfidenceSet
+    family : (N,) int32 or None
+        None without families: transmission then means contact.
+    propensity : (N,) float64 or None
+        Only matters where every route of transmission is shut.
+    reach : float
+    inheritance : tuple of float
+        Grid of shares; only 0 is used without families.
+    walks, seed : int
+    """
+
+    graph: ContactGraph
+    confidence: ConfidenceSet
+    family: IntArray | None = None
+    propensity: FloatArray | None = None
+    reach: float = 1.0
+    inheritance: tuple[float, ...] = INHERITANCE
+    walks: int = 10_000
+    seed: int = 1
+
+    def model(self, share: float, point: Point, turnover: float) -> SpreadModel:
+        """Spread model at one inheritance share and one point of the confidence set."""
+        return SpreadModel(
+            self.graph,
+            turnover,
+            shares=(0.0, 1.0 - share, share),
+            family=self.family,
+            propensity=self.propensity,
+            reach=self.reach,
+            recorded=point.recorded,
+            spill="transmission",
+        )
+
+    @property
+    def shares(self) -> tuple[float, ...]:
+        """Inheritance shares in use."""
+        return (0.0,) if self.family is None else self.inheritance
+
+
+@dataclass(frozen=True)
+class Setting:
+    """One world of the worst case, and where its draws come from."""
+
+    inheritance: float
+    kappa: float
+    turnover: float
+    centre: SpreadWorld
+    own: SpreadWorld | None
+
+    def law(self, statistic: str, count: int) -> Law | None:
+        """Law at this setting: reweighted from the centre, or walked where that loses too much."""
+        if self.own is not None and count in self.own.counts:
+            if self.own.effective(count) <= 0.0:
+                return None
+            return self.own.law(statistic, count)
+        if self.centre.effective(count) <= 0.0:
+            return None
+        return self.centre.law(statistic, count, self.turnover)
+
+
+@dataclass(frozen=True)
+class _Tail:
+    """Worst-case p for every value 0 .. len - 1, and the setting that gives it."""
+
+    p: FloatArray
+    worst: npt.NDArray[np.int64]
+    settings: tuple[Setting, ...]
+    laws: tuple[Law, ...]
+
+
+@dataclass(frozen=True)
+class ScatterWorlds:
+    """Contact-only and transmission-only laws at every count asked for.
+
+    Parameters
+    ----------
+    settings : tuple of Setting
+        Inheritance share 0 at the fitted recording and turnover comes first.
+    beta : float
+        Added to every worst case (Berger & Boos 1994).
+    families : int
+        Number of families (N without any): strands cannot be more.
+    """
+
+    settings: tuple[Setting, ...]
+    beta: float
+    families: int
+    _tails: dict[tuple[World, str, int], _Tail] = field(default_factory=dict, repr=False)
+
+    @property
+    def contact(self) -> SpreadWorld:
+        """Contact-only world at the fitted turnover and recording (for bands and pictures)."""
+        return self.settings[0].centre
+
+    def compare(self, count: int, *, joins: int, strands: int) -> tuple[Comparison, ...]:
+        """Compare a motif with both worlds.
+
+        Parameters
+        ----------
+        count : int
+            Recorded holders; must be among the counts asked for.
+        joins, strands : int
+            Observed.
+
+        Returns
+        -------
+        tuple of Comparison
+            Four: two measures against contact, then two against transmission. ``law`` and
+            ``expected`` are those of the worst case.
+        """
+        observed = {"joins": joins, "strands": strands}
+        return tuple(
+            self._one(world, statistic, direction, count, observed[statistic], k == 0)
+            for world, measures in MEASURES.items()
+            for k, (statistic, direction) in enumerate(measures)
+        )
+
+    def p(self, world: World, statistic: str, count: int, value: int) -> float:
+        """Worst-case p of one observed value, ``beta`` included; NaN where never drawn."""
+        tail = self._tail(world, statistic, count)
+        if not tail.laws:
+            return float("nan")
+        return float(min(1.0, tail.p[min(value, len(tail.p) - 1)] + self.beta))
+
+    def _one(  # noqa: PLR0917
+        self,
+        world: World,
+        statistic: str,
+        direction: Literal["many", "few"],
+        count: int,
+        value: int,
+        first: bool,
+    ) -> Comparison:
+        tail = self._tail(world, statistic, count)
+        if not tail.laws:
+            nan = float("nan")
+            note = f"No walk came by {count} recorded holders."
+            return Comparison(world, statistic, direction, value, nan, nan, nan, first, None, note)
+        k = int(tail.worst[min(value, len(tail.p) - 1)])
+        setting, law = tail.settings[k], tail.laws[k]
+        extreme = min(count, self.families) if direction == "many" else 0
+        extreme = max(extreme, value) if direction == "many" else min(extreme, value)
+        said = [f"worst case at turnover {setting.turnover:.4g}"]
+        if world == "transmission" and self.families < setting.centre.model.graph.n:
+            said.append(f"inheritance share {setting.inheritance:g}")
+        if np.isfinite(setting.kappa):
+            said.append(f"recording rate {setting.kappa:.4g}")
+        return Comparison(
+            world=world,
+            statistic=statistic,
+            direction=direction,
+            observed=value,
+            expected=law.mean(),
+            p=self.p(world, statistic, count, value),
+            p_attainable=self.p(world, statistic, count, extreme),
+            primary=first,
+            law=law,
+            note=", ".join(said),
+        )
+
+    def _tail(self, world: World, statistic: str, count: int) -> _Tail:
+        key = (world, statistic, count)
+        if key not in self._tails:
+            self._tails[key] = self._make_tail(world, statistic, count)
+        return self._tails[key]
+
+    def _make_tail(self, world: World, statistic: str, count: int) -> _Tail:
+        direction = dict(MEASURES[world])[statistic]
+        settings, laws = [], []
+        for setting in self.settings:
+            if world == "contact" and setting.inheritance > 0.0:
+                continue
+            law = setting.law(statistic, count)
+            if law is not None:
+                settings.append(setting)
+                laws.append(law)
+        top = max((int(law.values[-1]) for law in laws), default=0)
+        values = np.arange(max(top, count) + 2)
+        tail = p_many if direction == "many" else p_few
+        p = np.array([tail(law, values) for law in laws]).reshape(len(laws), len(values))
+        worst = p.argmax(axis=0) if laws else np.zeros(len(values), dtype=np.int64)
+        most = p.max(axis=0) if laws else np.full(len(values), np.nan)
+        return _Tail(most, worst, tuple(settings), tuple(laws))
+
+
+def scatter_worlds(
+    what: Transmission,
+    counts: Sequence[int] | IntArray,
+    *,
+    largest: int,
+    pool: Pool | None = None,
+) -> ScatterWorlds:
+    """Walk the worlds without a second invention.
+
+    One world is walked for each inheritance share and recording, at the fitted turnover; the other
+    turnovers of the confidence set reuse its walks by reweighting, count by count, and are walked
+    themselves only where less than a quarter of the effective draws would be left. The law of a
+    count depends on no other count.
+
+    Parameters
+    ----------
+    what : Transmission
+        Its ``confidence`` must not be refused.
+    counts : sequence of int
+        Recorded counts, 1 .. ``largest``.
+    largest : int
+        The catalogue's largest count, whatever is asked for.
+    pool : Pool or None
+    """
+    wanted = np.unique(np.asarray(counts, dtype=np.int32))
+    settings = []
+    for share in what.shares:
+        for point in what.confidence.points:
+            settings += _settings(what, share, point, wanted, largest, pool)
+    first = what.confidence.points[0]
+    settings.sort(key=lambda s: (s.inheritance, s.kappa != first.kappa, s.turnover != first.centre))
+    families = len(np.unique(what.family)) if what.family is not None else what.graph.n
+    return ScatterWorlds(tuple(settings), what.confidence.beta, families)
+
+
+def _settings(  # noqa: PLR0917
+    what: Transmission,
+    share: float,
+    point: Point,
+    wanted: IntArray,
+    largest: int,
+    pool: Pool | None,
+) -> list[Setting]:
+    """Walk one share and recording: the centre, then whatever reweighting cannot reach."""
+
+    def walk(turnover: float, counts: IntArray) -> SpreadWorld:
+        return spread_world(
+            what.model(share, point, turnover),
+            counts,
+            largest=largest,
+            walks=what.walks,
+            seed=what.seed,
+            pool=pool,
+        )
+
+    centre = walk(point.centre, wanted)
+    out = []
+    for turnover in point.turnovers:
+        lost = [
+            c for c in wanted.tolist() if centre.effective(c, turnover) < KEEP * centre.effective(c)
+        ]
+        own = walk(turnover, np.array(lost, dtype=np.int32)) if lost else None
+        out.append(Setting(share, point.kappa, turnover, centre, own))
+    return out
+
+
+def at_reach(what: Transmission, reach: float) -> Transmission:
+    """Give the same worlds with contact of another mean reach (sensitivity: 1, 1.5 and 3)."""
+    return replace(what, reach=reach)
