@@ -100,16 +100,7 @@ def test_stray_cells_far_away(book, tmp_path, reference):
         row = b'<row r="99999"><c r="' + reference + b'"><v>1</v></c></row></sheetData>'
         return data.replace(b"</sheetData>", row) if name.endswith("sheet3.xml") else data
 
-    examine_any(repacked(book, tmp_path / "x.xlsx", change))
-
-
-def examine_any(path: Path) -> str:
-    """As examine, where a damaged workbook may be refused without a closer reason."""
-    start = time.process_time()
-    catalogue, problems = check_catalogue(path)
-    assert time.process_time() - start < SECONDS
-    assert catalogue is not None or problems
-    return "\n".join(map(str, problems))
+    examine(repacked(book, tmp_path / "x.xlsx", change))
 
 
 def test_claimed_size_of_a_sheet_is_not_believed(book, tmp_path):
@@ -583,7 +574,7 @@ def fuzz_workbook(part, at, cut, put_in) -> None:
                     place = int(at * len(data))
                     data = data[:place] + put_in + data[place + cut :]
                 new.writestr(item.filename, data)
-        examine_any(path)
+        examine(path)
     finally:
         shutil.rmtree(folder)
 

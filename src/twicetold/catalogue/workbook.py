@@ -46,9 +46,14 @@ def workbook_tables(
         while block := handle.read(limits.MEBIBYTE):
             digest.update(block)
     sources.append(SourceFile(path.name, path.stat().st_size, digest.hexdigest()))
-    with warnings.catch_warnings():
-        warnings.simplefilter("ignore")  # styles and extensions that carry no data
-        book = openpyxl.load_workbook(path, read_only=True, data_only=False, keep_links=False)
+    handle = stack.enter_context(path.open("rb"))
+    try:
+        with warnings.catch_warnings():
+            warnings.simplefilter("ignore")  # styles and extensions that carry no data
+            book = openpyxl.load_workbook(handle, read_only=True, data_only=False, keep_links=False)
+    except Exception:  # whatever damaged XML makes the library raise
+        _say_damaged(path.name, notes)
+        return None
     stack.callback(book.close)
     tables: dict[str, Table] = {}
     for sheet in book.worksheets:
@@ -92,7 +97,7 @@ def _rows(sheet: Any, file: str, notes: Notes) -> Generator[list[str], None, Non
     visited = 0
     with warnings.catch_warnings():
         warnings.simplefilter("ignore")
-        for number, values in enumerate(sheet.iter_rows(values_only=True), start=1):
+        for number, values in enumerate(_cells(sheet, file, notes), start=1):
             visited += len(values) + 1
             if number > limits.SHEET_ROWS or visited > limits.SHEET_CELLS:
                 Spot(notes, file).error(
@@ -105,6 +110,23 @@ def _rows(sheet: Any, file: str, notes: Notes) -> Generator[list[str], None, Non
             while end and (values[end - 1] is None or values[end - 1] == ""):
                 end -= 1
             yield [_text(value) for value in values[:end]]
+
+
+def _cells(sheet: Any, file: str, notes: Notes) -> Iterator[tuple[Any, ...]]:
+    """The library's rows; whatever damaged XML makes it raise ends the table."""
+    try:
+        yield from sheet.iter_rows(values_only=True)
+    except Exception as exc:
+        _say_damaged(file, notes)
+        raise TableStoppedError from exc
+
+
+def _say_damaged(file: str, notes: Notes) -> None:
+    Spot(notes, file).error(
+        "damaged workbook",
+        "is damaged: its parts cannot be understood.",
+        "Save it again as .xlsx in the spreadsheet, or give the tables as CSV.",
+    )
 
 
 def _text(value: object) -> str:
