@@ -2,6 +2,7 @@
 
 The rule depends on nothing but the propensities and n. With P traditions of positive propensity:
 
+- n = P: the one set there is;
 - all equal: every one of the C(P, n) sets is visited when there are at most 200,000 of them and
   together they hold at most 4,000,000 traditions;
 - unequal: the same, and either P <= 16 (chances by dynamic programming over all subsets) or the
@@ -61,6 +62,8 @@ def few_enough(propensity: Floats, n: int) -> bool:
     positive = propensity[propensity > 0]
     count = len(positive)
     sets = math.comb(count, n)
+    if sets == 1:
+        return True
     if sets > MAX_SETS or sets * n > MAX_VISITS:
         return False
     if np.all(positive == positive[0]) or count <= MAX_ALL_SUBSETS:
@@ -128,7 +131,7 @@ def _law(mass: Floats) -> Law:
 
 
 def _chances(weights: Floats, rows: npt.NDArray[np.int32]) -> Floats:
-    if np.all(weights == weights[0]):
+    if rows.shape[1] == len(weights) or np.all(weights == weights[0]):
         return np.ones(len(rows))
     if len(weights) <= MAX_ALL_SUBSETS:
         chance = np.empty(1 << len(weights))

@@ -41,7 +41,7 @@ def p_value(at_least: npt.ArrayLike, draws: float, *, exact: bool = False) -> Fl
     """
     tail = np.asarray(at_least, dtype=np.float64)
     slack = 1e-9 * abs(draws)
-    if not draws > 0 or np.any(tail < 0) or np.any(tail > draws + slack):
+    if not draws > 0 or not np.all((tail >= 0) & (tail <= draws + slack)):
         raise TwicetoldError(
             f"A tail must lie from 0 to the number of draws (above 0), got {tail} of {draws}."
         )
