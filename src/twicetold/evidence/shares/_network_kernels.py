@@ -67,15 +67,15 @@ def _hidden(z, bias):  # type: ignore[no-untyped-def]
 
 
 @nb.njit(nogil=True, cache=True)
-def softmax(z, bias):  # type: ignore[no-untyped-def]
-    """Turn the (G, B) float32 scores into weights that sum to 1 over the first axis, in place."""
+def softmax(z, base):  # type: ignore[no-untyped-def]
+    """Turn (G, B) scores, on top of ``base``, into weights summing to 1 over G, in place."""
     top = np.empty(z.shape[1], dtype=np.float32)
     total = np.zeros(z.shape[1], dtype=np.float32)
     for s in range(z.shape[1]):
-        top[s] = z[0, s] + bias[0]
+        top[s] = z[0, s] + base[0]
     for j in range(z.shape[0]):
         for s in range(z.shape[1]):
-            z[j, s] += bias[j]
+            z[j, s] += base[j]
             top[s] = max(top[s], z[j, s])
     for j in range(z.shape[0]):
         for s in range(z.shape[1]):
@@ -100,14 +100,38 @@ def softmax(z, bias):  # type: ignore[no-untyped-def]
 
 
 @nb.njit(nogil=True, cache=True)
-def forward(x, w1, b1, w2, b2, w3, b3, h1, h2, z):  # type: ignore[no-untyped-def]
-    """Fill the hidden layers ``h1``, ``h2`` and the output weights ``z`` for columns of ``x``."""
+def forward(x, layers, basis, base, h1, h2, c, z):  # type: ignore[no-untyped-def]
+    """Fill the hidden layers, the coefficients ``c`` of the basis and the weights ``z``."""
+    w1, b1, w2, b2, w3, b3 = layers
     matmul(w1, x, h1)
     _hidden(h1, b1)
     matmul(w2, h1, h2)
     _hidden(h2, b2)
-    matmul(w3, h2, z)
-    softmax(z, b3)
+    matmul(w3, h2, c)
+    for j in range(c.shape[0]):
+        for s in range(c.shape[1]):
+            c[j, s] += b3[j]
+    matmul(basis, c, z)
+    softmax(z, base)
+
+
+@nb.njit(nogil=True, cache=True)
+def _layers(flat, sizes):  # type: ignore[no-untyped-def]
+    """Views of flat parameters as the weights and biases of the three layers."""
+    d, a, b, q = sizes[0], sizes[1], sizes[2], sizes[3]
+    e1 = a * d
+    e2 = e1 + a
+    e3 = e2 + b * a
+    e4 = e3 + b
+    e5 = e4 + q * b
+    return (
+        flat[:e1].reshape(a, d),
+        flat[e1:e2],
+        flat[e2:e3].reshape(b, a),
+        flat[e3:e4],
+        flat[e4:e5].reshape(q, b),
+        flat[e5:],
+    )
 
 
 @nb.njit(nogil=True, cache=True)
@@ -141,72 +165,78 @@ def _adam(value, grad, first, second, rate, fix1, fix2, decay):  # type: ignore[
 
 
 @nb.njit(nogil=True, cache=True)
+def _pull(z, rows, knots, factors, weight):  # type: ignore[no-untyped-def]
+    """Turn weights ``z`` into the gradient of minus the mean log density; give the score.
+
+    d(-log density) / d score_k is z_k, less z_k f_k / density at the corners around the truth.
+    Returns the weighted sum of log densities and the sum of weights.
+    """
+    corners = knots.shape[1]
+    part = np.empty(corners, dtype=np.float32)
+    total = 0.0
+    score = 0.0
+    for row in rows:
+        total += weight[row]
+    for s in range(len(rows)):
+        row = rows[s]
+        w = np.float32(weight[row] / total)
+        density = np.float32(1e-30)
+        for k in range(corners):
+            part[k] = z[knots[row, k], s] * factors[row, k]
+            density += part[k]
+        score += weight[row] * math.log(density)
+        for k in range(z.shape[0]):
+            z[k, s] *= w
+        for k in range(corners):
+            z[knots[row, k], s] -= w * part[k] / density
+    return score, total
+
+
+@nb.njit(nogil=True, cache=True)
 def train_steps(  # type: ignore[no-untyped-def]
-    inputs, knots, factors, weight, order, batch, parameters, first, second, sizes, taken, total,
-    rate, decay,
+    inputs, knots, factors, weight, order, batch, basis, base, parameters, first, second, sizes,
+    taken, total, rate, decay,
 ):  # fmt: skip
     """Take ``len(order) // batch`` steps down the weighted minus log density of the true shares.
 
     ``parameters`` (with Adam's ``first`` and ``second``) are flat float32 arrays changed in place:
     three weight matrices and biases of layers ``sizes``. Returns the mean weighted log density.
     """
-    d, a, b, o = sizes[0], sizes[1], sizes[2], sizes[3]
-    e1 = a * d
-    e2 = e1 + a
-    e3 = e2 + b * a
-    e4 = e3 + b
-    e5 = e4 + o * b
-    w1 = parameters[:e1].reshape(a, d)
-    b1 = parameters[e1:e2]
-    w2 = parameters[e2:e3].reshape(b, a)
-    b2 = parameters[e3:e4]
-    w3 = parameters[e4:e5].reshape(o, b)
-    b3 = parameters[e5:]
+    d, a, b, q = sizes[0], sizes[1], sizes[2], sizes[3]
+    points = basis.shape[0]
+    layers = _layers(parameters, sizes)
     grad = np.empty_like(parameters)
+    gw1, gb1, gw2, gb2, gw3, gb3 = _layers(grad, sizes)
     x = np.empty((d, batch), dtype=np.float32)
     h1 = np.empty((a, batch), dtype=np.float32)
     h2 = np.empty((b, batch), dtype=np.float32)
-    z = np.empty((o, batch), dtype=np.float32)
+    c = np.empty((q, batch), dtype=np.float32)
+    z = np.empty((points, batch), dtype=np.float32)
     x_t = np.empty((batch, d), dtype=np.float32)
     h1_t = np.empty((batch, a), dtype=np.float32)
     h2_t = np.empty((batch, b), dtype=np.float32)
     w1_t = np.empty((d, a), dtype=np.float32)
     w2_t = np.empty((a, b), dtype=np.float32)
-    w3_t = np.empty((b, o), dtype=np.float32)
+    w3_t = np.empty((b, q), dtype=np.float32)
+    basis_t = np.empty((q, points), dtype=np.float32)
+    _transpose(basis, basis_t)
     g2 = np.empty((b, batch), dtype=np.float32)
     g1 = np.empty((a, batch), dtype=np.float32)
-    corners = knots.shape[1]
-    pull = np.empty(corners, dtype=np.float32)
     score = 0.0
     mass = 0.0
     for step in range(len(order) // batch):
         rows = order[step * batch : (step + 1) * batch]
-        sum_w = 0.0
         for s in range(batch):
-            sum_w += weight[rows[s]]
             for k in range(d):
                 x[k, s] = inputs[rows[s], k]
-        forward(x, w1, b1, w2, b2, w3, b3, h1, h2, z)
-        for s in range(batch):
-            row = rows[s]
-            w = np.float32(weight[row] / sum_w)
-            density = np.float32(0.0)
-            for c in range(corners):
-                density += z[knots[row, c], s] * factors[row, c]
-            density = max(density, np.float32(1e-30))
-            score += weight[row] * math.log(density)
-            # d(-log density)/d score_k = z_k - z_k c_k / density; the last only at the corners.
-            for c in range(corners):
-                k = knots[row, c]
-                pull[c] = w * (z[k, s] * factors[row, c] / density)
-            for k in range(o):
-                z[k, s] *= w
-            for c in range(corners):
-                z[knots[row, c], s] -= pull[c]
-        mass += sum_w
-        _layer_back(z, h2, w3, True, grad[e4:e5].reshape(o, b), grad[e5:], h2_t, w3_t, g2)
-        _layer_back(g2, h1, w2, True, grad[e2:e3].reshape(b, a), grad[e3:e4], h1_t, w2_t, g1)
-        _layer_back(g1, x, w1, False, grad[:e1].reshape(a, d), grad[e1:e2], x_t, w1_t, g1)
+        forward(x, layers, basis, base, h1, h2, c, z)
+        gained, weighed = _pull(z, rows, knots, factors, weight)
+        score += gained
+        mass += weighed
+        matmul(basis_t, z, c)
+        _layer_back(c, h2, layers[4], True, gw3, gb3, h2_t, w3_t, g2)
+        _layer_back(g2, h1, layers[2], True, gw2, gb2, h1_t, w2_t, g1)
+        _layer_back(g1, x, layers[0], False, gw1, gb1, x_t, w1_t, g1)
         now = taken + step
         # The rate falls to nothing along half a cosine.
         speed = np.float32(rate * 0.5 * (1.0 + math.cos(math.pi * now / total)))
@@ -217,36 +247,22 @@ def train_steps(  # type: ignore[no-untyped-def]
 
 
 @nb.njit(nogil=True, cache=True)
-def weights_of(inputs, parameters, sizes, out):  # type: ignore[no-untyped-def]
+def weights_of(inputs, parameters, sizes, basis, base, out):  # type: ignore[no-untyped-def]
     """Fill ``out`` ((rows, G) float32) with the network's weights for each row of ``inputs``."""
-    d, a, b, o = sizes[0], sizes[1], sizes[2], sizes[3]
-    e1 = a * d
-    e2 = e1 + a
-    e3 = e2 + b * a
-    e4 = e3 + b
-    e5 = e4 + o * b
+    d, a, b, q = sizes[0], sizes[1], sizes[2], sizes[3]
     width = 128
+    x = np.zeros((d, width), dtype=np.float32)
     h1 = np.empty((a, width), dtype=np.float32)
     h2 = np.empty((b, width), dtype=np.float32)
-    z = np.empty((o, width), dtype=np.float32)
-    x = np.zeros((d, width), dtype=np.float32)
+    c = np.empty((q, width), dtype=np.float32)
+    z = np.empty((basis.shape[0], width), dtype=np.float32)
+    layers = _layers(parameters, sizes)
     for at in range(0, inputs.shape[0], width):
         rows = min(width, inputs.shape[0] - at)
         for s in range(rows):
             for k in range(d):
                 x[k, s] = inputs[at + s, k]
-        forward(
-            x,
-            parameters[:e1].reshape(a, d),
-            parameters[e1:e2],
-            parameters[e2:e3].reshape(b, a),
-            parameters[e3:e4],
-            parameters[e4:e5].reshape(o, b),
-            parameters[e5:],
-            h1,
-            h2,
-            z,
-        )
+        forward(x, layers, basis, base, h1, h2, c, z)
         for s in range(rows):
-            for k in range(o):
+            for k in range(z.shape[0]):
                 out[at + s, k] = z[k, s]

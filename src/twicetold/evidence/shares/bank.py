@@ -169,14 +169,14 @@ def _what_it_depends_on(
     model: SpreadModel, largest: int, seed: int, walks: int, cap: int
 ) -> dict[str, object]:
     """Everything the bank is made of, for the cache's key."""
+    # Every field of the model, also those it may be given later; the shares are the bank's own.
+    own = {f.name: getattr(model, f.name) for f in dataclasses.fields(model)}
+    del own["graph"], own["family"], own["shares"]
     return {
-        "n": model.graph.n,
+        **own,
+        "traditions": model.graph.n,
         "edges": model.graph.edges,
-        "family": model.family_codes,
-        "propensity": model.propensity,
-        "recorded": model.recorded,
-        "turnover": model.turnover,
-        "reach": model.reach,
+        "family_codes": model.family_codes,
         "largest": largest,
         "cap": cap,
         "seed": seed,

@@ -1,6 +1,7 @@
 """A small ensemble of networks from features to a density over the simplex.
 
-Each network has two hidden layers and a softmax over the hats of :mod:`simplex`; it is trained to
+Each network has two hidden layers, which give a log density made of smooth functions of the shares,
+laid over the hats of :mod:`simplex`; it is trained to
 the log density it gives to the shares each snapshot truly came from. That score is proper (Gneiting
 & Raftery 2007, JASA 102:359): its best answer is the posterior under the prior the bank was drawn
 from. Minibatch steps are Adam's (Kingma & Ba 2015).
@@ -60,19 +61,22 @@ class Ensemble:
     Parameters
     ----------
     sizes : (4,) int64
-        Units of the input, hidden and output layers.
+        Features, units of the hidden layers, functions of the basis.
     parameters : (E, P) float32
+    where : Simplex
     """
 
     sizes: npt.NDArray[np.int64]
     parameters: Float32
+    where: Simplex
 
     def weights(self, inputs: Float32) -> FloatArray:
         """Average the members' knot weights; (S, G), rows sum to 1 but for rounding."""
-        total = np.zeros((len(inputs), int(self.sizes[-1])))
+        total = np.zeros((len(inputs), len(self.where.knots)))
         out = np.empty(total.shape, dtype=np.float32)
+        basis, base = _stage(self.where)
         for member in self.parameters:
-            weights_of(inputs, member, self.sizes, out)
+            weights_of(inputs, member, self.sizes, basis, base, out)
             total += out
         return np.asarray(total / total.sum(axis=1, keepdims=True))
 
@@ -88,17 +92,19 @@ class _Learner:
     taken: int = 0
 
 
-def starting_parameters(
-    sizes: npt.NDArray[np.int64], prior: FloatArray, rng: np.random.Generator
-) -> Float32:
-    """Draw He's starting weights; the output layer starts near the flat prior."""
+def starting_parameters(sizes: npt.NDArray[np.int64], rng: np.random.Generator) -> Float32:
+    """Draw He's starting weights; the output starts near the flat prior (coefficients near 0)."""
     parts = []
     for layer in range(3):
         fan, units = int(sizes[layer]), int(sizes[layer + 1])
         scale = np.sqrt(2.0 / fan) * (0.1 if layer == 2 else 1.0)
-        parts.append(rng.normal(scale=scale, size=fan * units))
-        parts.append(np.log(prior) if layer == 2 else np.zeros(units))
+        parts += [rng.normal(scale=scale, size=fan * units), np.zeros(units)]
     return np.concatenate(parts).astype(np.float32)
+
+
+def _stage(where: Simplex) -> tuple[Float32, Float32]:
+    """Basis and log prior in single precision."""
+    return np.ascontiguousarray(where.basis, np.float32), np.log(where.prior).astype(np.float32)
 
 
 def train(
@@ -120,13 +126,13 @@ def train(
         share the lessons in memory.
     """
     rows, width = lessons.inputs.shape
-    sizes = np.array([width, *HIDDEN, len(where.knots)], dtype=np.int64)
+    sizes = np.array([width, *HIDDEN, where.basis.shape[1]], dtype=np.int64)
     batch = min(BATCH, rows)
     total = max(1, min(steps, _REPEATS * rows // batch))
     learners = []
     for member in range(members):
         rng = chunk_generator(seed, Stream.SHARES, member)
-        start = starting_parameters(sizes, where.prior, rng)
+        start = starting_parameters(sizes, rng)
         repeats = [rng.permutation(rows) for _ in range(-(-total * batch // rows))]
         order = np.concatenate(repeats)[: total * batch]
         learners.append(_Learner(start, np.zeros_like(start), np.zeros_like(start), order))
@@ -135,19 +141,19 @@ def train(
     for step in range(0, total, _SEGMENT):
         stop = min(step + _SEGMENT, total)
         jobs = [(learner, stop, total, batch) for learner in learners]
-        for _ in threads.run(_segment, (lessons, sizes), jobs, label="training"):
+        for _ in threads.run(_segment, (lessons, sizes, where), jobs, label="training"):
             pass
         if progress is not None:
             progress("learning the shares", stop, total)
     out = np.stack([learner.parameters for learner in learners])
     out.flags.writeable = False
-    return Ensemble(sizes, out)
+    return Ensemble(sizes, out, where)
 
 
 def _segment(
-    shared: tuple[Lessons, npt.NDArray[np.int64]], job: tuple[_Learner, int, int, int]
+    shared: tuple[Lessons, npt.NDArray[np.int64], Simplex], job: tuple[_Learner, int, int, int]
 ) -> float:
-    lessons, sizes = shared
+    lessons, sizes, where = shared
     learner, stop, total, batch = job
     score = train_steps(
         lessons.inputs,
@@ -156,6 +162,7 @@ def _segment(
         lessons.weight,
         learner.order[learner.taken * batch : stop * batch],
         batch,
+        *_stage(where),
         learner.parameters,
         learner.first,
         learner.second,

@@ -176,7 +176,7 @@ def fit_posterior(
         routes=bank.routes,
         largest=bank.largest,
         scale=Scale(found["knots"], found["centre"], found["gain"]),
-        ensemble=Ensemble(found["sizes"], found["parameters"]),
+        ensemble=Ensemble(found["sizes"], found["parameters"], simplex(bank.routes)),
         sharpness=found["sharpness"],
         width=found["width"],
     )

@@ -13,6 +13,7 @@ from functools import lru_cache
 
 import numpy as np
 import numpy.typing as npt
+from scipy.special import eval_jacobi
 
 FloatArray = npt.NDArray[np.float64]
 IntArray = npt.NDArray[np.int64]
@@ -21,6 +22,10 @@ IntArray = npt.NDArray[np.int64]
 STEPS = 20
 #: Bins of a share's marginal; a multiple of STEPS, so that hats are linear inside each bin.
 BINS = 400
+#: Highest degree of the polynomials that log densities are made of.
+DEGREE = 6
+#: Ends of intervals closer than this to 0 or 1 are put there.
+SNAP = 0.02
 #: Points across a small triangle at which the marginals of hats are integrated.
 _FINE = 40
 
@@ -41,6 +46,9 @@ class Simplex:
         Mean of each hat.
     marginal : (routes, G, BINS) float64
         Probability of each bin of each share under each hat.
+    basis : (G, Q) float64
+        Smooth functions at the knots, orthonormal over the simplex: all polynomials of degree 1
+        to DEGREE. Log densities are made of them, so that noise does not pass for shape.
     """
 
     routes: int
@@ -48,6 +56,7 @@ class Simplex:
     prior: FloatArray
     centre: FloatArray
     marginal: FloatArray
+    basis: FloatArray
 
     def locate(self, shares: FloatArray) -> tuple[IntArray, FloatArray]:
         """Give the knots around each point and its barycentric coordinates among them.
@@ -70,8 +79,9 @@ class Simplex:
     def intervals(self, weight: FloatArray, level: float = 0.9) -> tuple[FloatArray, FloatArray]:
         """Shortest interval of each share holding ``level`` of its marginal.
 
-        The shortest interval ends at 0 or 1 when the marginal piles up there, so that a pure
-        route can be inside it (an interval with equal tails never holds 0 or 1).
+        The shortest interval ends at 0 when the marginal piles up there (one with equal tails never
+        holds 0). At 1 the flat prior of three shares vanishes, so no interval would ever hold a
+        pure route; ends within ``SNAP`` of 0 or 1, closer than knots can tell, are put there.
 
         Parameters
         ----------
@@ -89,6 +99,8 @@ class Simplex:
             mass = np.einsum("bg,gk->bk", weight, self.marginal[r], optimize=False)
             for b in range(len(weight)):
                 low[b, r], high[b, r] = _shortest(mass[b], level)
+        low[low < SNAP] = 0.0
+        high[high > 1.0 - SNAP] = 1.0
         return low, high
 
 
@@ -147,6 +159,29 @@ def _quadrature(routes: int) -> FloatArray:
     return np.stack([e, c, np.maximum(1.0 - e - c, 0.0)], axis=1)
 
 
+def _polynomials(shares: FloatArray, routes: int) -> FloatArray:
+    """Orthonormal polynomials over the flat simplex, the constant left out.
+
+    Legendre's on the segment; Koornwinder's (1975) products of Jacobi polynomials on the triangle,
+    normalised to mean square 1 under the flat density.
+    """
+    e = shares[:, 0]
+    if routes == 2:
+        terms = [np.sqrt(2 * k + 1) * eval_jacobi(k, 0, 0, 2 * e - 1) for k in range(1, DEGREE + 1)]
+        return np.stack(terms, axis=1)
+    rest = 1.0 - e
+    # Among what is not emergence, contact against inheritance; at e = 1 the factor rest**k is 0.
+    split = np.where(rest > 0, 2.0 * shares[:, 1] / np.where(rest > 0, rest, 1.0) - 1.0, 0.0)
+    out = []
+    for total in range(1, DEGREE + 1):
+        for k in range(total + 1):
+            j = total - k
+            across = eval_jacobi(k, 0, 0, split) * rest**k
+            along = eval_jacobi(j, 2 * k + 1, 0, 2 * e - 1)
+            out.append(np.sqrt((2 * k + 1) * (total + 1)) * across * along)
+    return np.stack(out, axis=1)
+
+
 @lru_cache(maxsize=2)
 def simplex(routes: int) -> Simplex:
     """Give the simplex of two or three routes.
@@ -182,7 +217,7 @@ def simplex(routes: int) -> Simplex:
         cells = around * BINS + bins[:, None]
         counted = np.bincount(cells.ravel(), inside.ravel(), size * BINS)
         marginal[r] = counted.reshape(size, BINS) / mass[:, None]
-    out = Simplex(routes, knots, mass / mass.sum(), centre, marginal)
-    for array in (out.knots, out.prior, out.centre, out.marginal):
+    out = Simplex(routes, knots, mass / mass.sum(), centre, marginal, _polynomials(knots, routes))
+    for array in (out.knots, out.prior, out.centre, out.marginal, out.basis):
         array.flags.writeable = False
     return out
