@@ -9,8 +9,11 @@ stratum's order are held by exactly those motifs with more than r holders in it.
 motif, the joins of all motifs are the column sums of (row of one end AND row of the other) over
 the edges, added with carry-save adders (Harley & Seal; see Warren 2012, Hacker's Delight 5-1).
 
-``count_own`` serves motifs that bring rates of their own for their holders.
+``count_own`` serves motifs that bring rates of their own for their holders: the same count, then
+again one by one for the few motifs whose holders that changes.
 """
+
+# ruff: noqa: PLR0917 - kernels take plain arrays, one by one
 
 from __future__ import annotations
 
@@ -77,6 +80,104 @@ def _clocks(word, rate, strata, caps, uniform, key):  # type: ignore[no-untyped-
 
 
 @nb.njit(nogil=True, cache=True)
+def _count_all(row, edges, bits, span, work, out):  # type: ignore[no-untyped-def]
+    """Joins of every motif: column sums over the edges of (row of one end AND row of the other).
+
+    ``row[v]`` is the row of ``bits`` for the place of v; the last row is empty. ``work`` holds the
+    bit planes of the sums (depth, W), a carry (W,) and two lists of rows (A + 8,).
+    """
+    planes, carry, left, right = work
+    n_edges, width, depth = len(edges), bits.shape[1], len(planes)
+    empty = bits.shape[0] - 1
+    one = np.uint64(1)
+    kept = 0
+    for e in range(n_edges):
+        a, b = row[edges[e, 0]], row[edges[e, 1]]
+        if a < empty and b < empty:
+            left[kept] = a
+            right[kept] = b
+            kept += 1
+    for extra in range(8):
+        left[kept + extra] = empty
+        right[kept + extra] = empty
+    planes[:] = 0
+    for base in range(0, kept, 8):
+        top = 0
+        for e in range(base, base + 8):
+            top = max(top, min(span[left[e]], span[right[e]]))
+        a0, b0 = left[base], right[base]
+        a1, b1 = left[base + 1], right[base + 1]
+        a2, b2 = left[base + 2], right[base + 2]
+        a3, b3 = left[base + 3], right[base + 3]
+        a4, b4 = left[base + 4], right[base + 4]
+        a5, b5 = left[base + 5], right[base + 5]
+        a6, b6 = left[base + 6], right[base + 6]
+        a7, b7 = left[base + 7], right[base + 7]
+        for w in range(top):
+            ones, twos, fours = planes[0, w], planes[1, w], planes[2, w]
+            x, y = bits[a0, w] & bits[b0, w], bits[a1, w] & bits[b1, w]
+            u = x ^ y
+            t0 = (x & y) | (u & ones)
+            ones ^= u
+            x, y = bits[a2, w] & bits[b2, w], bits[a3, w] & bits[b3, w]
+            u = x ^ y
+            t1 = (x & y) | (u & ones)
+            ones ^= u
+            u = t0 ^ t1
+            f0 = (t0 & t1) | (u & twos)
+            twos ^= u
+            x, y = bits[a4, w] & bits[b4, w], bits[a5, w] & bits[b5, w]
+            u = x ^ y
+            t0 = (x & y) | (u & ones)
+            ones ^= u
+            x, y = bits[a6, w] & bits[b6, w], bits[a7, w] & bits[b7, w]
+            u = x ^ y
+            t1 = (x & y) | (u & ones)
+            ones ^= u
+            u = t0 ^ t1
+            f1 = (t0 & t1) | (u & twos)
+            twos ^= u
+            u = f0 ^ f1
+            carry[w] = (f0 & f1) | (u & fours)
+            planes[0, w] = ones
+            planes[1, w] = twos
+            planes[2, w] = fours ^ u
+        for p in range(3, depth):
+            going = np.uint64(0)
+            for w in range(top):
+                c = carry[w]
+                held = planes[p, w]
+                planes[p, w] = held ^ c
+                carry[w] = held & c
+                going |= held & c
+            if going == 0:
+                break
+    for w in range(width):
+        used = depth
+        while used > 0 and planes[used - 1, w] == 0:
+            used -= 1
+        last = min(64, len(out) - 64 * w)
+        for b in range(last):
+            total = np.int64(0)
+            for p in range(used):
+                total |= np.int64((planes[p, w] >> np.uint64(b)) & one) << p
+            out[64 * w + b] = total
+
+
+@nb.njit(nogil=True, cache=True)
+def _workspace(n_edges, width):  # type: ignore[no-untyped-def]
+    depth = 4
+    while (1 << depth) <= n_edges:
+        depth += 1
+    return (
+        np.zeros((depth, width), dtype=np.uint64),
+        np.empty(width, dtype=np.uint64),
+        np.empty(n_edges + 8, dtype=np.int64),
+        np.empty(n_edges + 8, dtype=np.int64),
+    )
+
+
+@nb.njit(nogil=True, cache=True)
 def count_shared(words, rate, strata, caps, edges, table, hist):  # type: ignore[no-untyped-def]
     """Add one count per draw and motif to ``hist``.
 
@@ -94,103 +195,23 @@ def count_shared(words, rate, strata, caps, edges, table, hist):  # type: ignore
     """
     start, member = strata
     row_start, bits, span, hist_start = table
-    n, n_edges, width = len(rate), len(edges), bits.shape[1]
-    n_motifs = len(hist_start) - 1
-    depth = 4
-    while (1 << depth) <= n_edges:
-        depth += 1
-    planes = np.zeros((depth, width), dtype=np.uint64)
-    carry = np.empty(width, dtype=np.uint64)
-    empty = bits.shape[0] - 1
-    uniform = np.empty(n)
-    key = np.empty(n)
+    n = len(rate)
+    work = _workspace(len(edges), bits.shape[1])
+    joins = np.empty(len(hist_start) - 1, dtype=np.int64)
+    uniform, key = np.empty(n), np.empty(n)
     best = np.empty(n, dtype=np.int64)
-    row = np.full(n, empty, dtype=np.int64)
-    left = np.empty(n_edges + 8, dtype=np.int64)
-    right = np.empty(n_edges + 8, dtype=np.int64)
-    one = np.uint64(1)
+    row = np.empty(n, dtype=np.int64)
     for d in range(len(words)):
         _clocks(words[d], rate, strata, caps, uniform, key)
+        row[:] = bits.shape[0] - 1
         for s in range(len(start) - 1):
-            if caps[s] == 0:
-                continue
-            for i in range(start[s], start[s + 1]):
-                row[member[i]] = empty
-            _first(key, start[s], start[s + 1], caps[s], member, best)
-            for r in range(caps[s]):
-                row[best[r]] = row_start[s] + r
-        kept = 0
-        for e in range(n_edges):
-            a, b = row[edges[e, 0]], row[edges[e, 1]]
-            if a != empty and b != empty:
-                left[kept] = a
-                right[kept] = b
-                kept += 1
-        for extra in range(8):
-            left[kept + extra] = empty
-            right[kept + extra] = empty
-        planes[:] = 0
-        for base in range(0, kept, 8):
-            top = 0
-            for e in range(base, base + 8):
-                top = max(top, min(span[left[e]], span[right[e]]))
-            a0, b0 = left[base], right[base]
-            a1, b1 = left[base + 1], right[base + 1]
-            a2, b2 = left[base + 2], right[base + 2]
-            a3, b3 = left[base + 3], right[base + 3]
-            a4, b4 = left[base + 4], right[base + 4]
-            a5, b5 = left[base + 5], right[base + 5]
-            a6, b6 = left[base + 6], right[base + 6]
-            a7, b7 = left[base + 7], right[base + 7]
-            for w in range(top):
-                ones, twos, fours = planes[0, w], planes[1, w], planes[2, w]
-                x, y = bits[a0, w] & bits[b0, w], bits[a1, w] & bits[b1, w]
-                u = x ^ y
-                t0 = (x & y) | (u & ones)
-                ones ^= u
-                x, y = bits[a2, w] & bits[b2, w], bits[a3, w] & bits[b3, w]
-                u = x ^ y
-                t1 = (x & y) | (u & ones)
-                ones ^= u
-                u = t0 ^ t1
-                f0 = (t0 & t1) | (u & twos)
-                twos ^= u
-                x, y = bits[a4, w] & bits[b4, w], bits[a5, w] & bits[b5, w]
-                u = x ^ y
-                t0 = (x & y) | (u & ones)
-                ones ^= u
-                x, y = bits[a6, w] & bits[b6, w], bits[a7, w] & bits[b7, w]
-                u = x ^ y
-                t1 = (x & y) | (u & ones)
-                ones ^= u
-                u = t0 ^ t1
-                f1 = (t0 & t1) | (u & twos)
-                twos ^= u
-                u = f0 ^ f1
-                carry[w] = (f0 & f1) | (u & fours)
-                planes[0, w] = ones
-                planes[1, w] = twos
-                planes[2, w] = fours ^ u
-            for p in range(3, depth):
-                going = np.uint64(0)
-                for w in range(top):
-                    c = carry[w]
-                    held = planes[p, w]
-                    planes[p, w] = held ^ c
-                    carry[w] = held & c
-                    going |= held & c
-                if going == 0:
-                    break
-        for w in range(width):
-            used = depth
-            while used > 0 and planes[used - 1, w] == 0:
-                used -= 1
-            last = min(64, n_motifs - 64 * w)
-            for b in range(last):
-                total = 0
-                for p in range(used):
-                    total |= np.int64((planes[p, w] >> np.uint64(b)) & one) << p
-                hist[hist_start[64 * w + b] + total] += 1
+            if caps[s] > 0:
+                _first(key, start[s], start[s + 1], caps[s], member, best)
+                for r in range(caps[s]):
+                    row[best[r]] = row_start[s] + r
+        _count_all(row, edges, bits, span, work, joins)
+        for m in range(len(joins)):
+            hist[hist_start[m] + joins[m]] += 1
 
 
 @nb.njit(nogil=True, cache=True)
@@ -236,86 +257,134 @@ def _merge(part, common, own, buffers, chosen):  # type: ignore[no-untyped-def]
 
 
 @nb.njit(nogil=True, cache=True)
-def count_own(words, rate, strata, caps, later, motifs, hist):  # type: ignore[no-untyped-def]
+def _count_merged(m, common, strata, later, motifs, buffers):  # type: ignore[no-untyped-def]
+    """Joins of one motif whose holders ring at their own rates."""
+    order, wait, when, late, caps, holds = common
+    start, _ = strata
+    indptr, indices = later
+    part_start, part_stratum, holder_start, holder, own = motifs
+    time, who, theirs, chosen, mine, held, stamp = buffers
+    k = 0
+    for q in range(part_start[m], part_start[m + 1]):
+        s = part_stratum[q]
+        first = holder_start[q]
+        size = holder_start[q + 1] - first
+        begin = start[s]
+        apart = False
+        if begin + size < start[s + 1]:
+            limit = when[begin + size]
+            for i in range(size):
+                v = order[begin + i]
+                chosen[k + i] = v
+                if late[begin + i] > limit:
+                    apart |= (holds[v, m >> 6] >> np.uint64(m & 63)) & np.uint64(1) != 0
+        else:
+            for i in range(size):
+                chosen[k + i] = order[begin + i]
+        if apart:
+            for i in range(first, first + size):
+                theirs[i] = wait[holder[i]] / own[i]
+            _merge(
+                (holder, first, size),
+                (order, when, begin, begin + caps[s]),
+                theirs,
+                (time, who, mine, stamp),
+                chosen[k:],
+            )
+        k += size
+    for i in range(k):
+        held[chosen[i]] = stamp
+    joins = 0
+    for i in range(k):
+        v = chosen[i]
+        for e in range(indptr[v], indptr[v + 1]):
+            if held[indices[e]] == stamp:
+                joins += 1
+    return joins
+
+
+@nb.njit(nogil=True, cache=True)
+def count_own(words, rate, strata, caps, graph, table, motifs, hist):  # type: ignore[no-untyped-def]
     """Add one count per draw and motif to ``hist``; holders ring at their motif's own rates.
 
-    A group's holders differ from the common order's first ones only if one of those is a holder
-    whose own, slower clock rings after the next in line; only then are the two orders merged.
+    All motifs are counted as if they shared the rates. That count stands unless, in some group,
+    one of the first to ring is a holder of the motif whose own, slower clock rings after the next
+    in line; those motifs are found with their bits, and counted again one by one.
 
     Parameters
     ----------
     words, rate, strata, hist
         As in :func:`count_shared`.
-    caps : (S,) int64
-        At least min(size of the stratum, twice the most holders any motif has in it).
-    later : (indptr (n + 1,), indices (A,)) int64
-        Neighbours with a higher number than the tradition itself, for the edges counted.
-    motifs : (part_start (M + 1,), part_stratum (P,), holder_start (P + 1,), holder (H,), own (H,),
-              shrink (n,), hist_start (M + 1,))
-        The motif's holders by stratum ("parts") and their own rates; ``shrink`` is the least
-        own rate over common rate at a tradition, 0 where some own rate is above the common one.
+    caps : (most (S,), far (S,)) int64
+        Most holders any motif has in the stratum; min(size of the stratum, twice that).
+    graph : (edges (A, 2), indptr (n + 1,), indices (any,)) int64
+        The edges as in :func:`count_shared`; neighbours with a higher number.
+    table : (row_start, bits, span, holds (n, W) uint64, shrink (n,), hist_start)
+        As in :func:`count_shared`; ``holds``: the motifs a tradition holds; ``shrink``: its least
+        own rate over its common rate, at most 1.
+    motifs : (part_start (M + 1,), part_stratum (P,), holder_start (P + 1,), holder (H,), own (H,))
+        The motif's holders by stratum ("parts") and their own rates.
     """
     start, member = strata
-    indptr, indices = later
-    part_start, part_stratum, holder_start, holder, own, shrink, hist_start = motifs
-    n = len(rate)
-    uniform, key = np.empty(n), np.empty(n)
-    order = np.empty(n, dtype=np.int64)
-    wait, when, late = np.empty(n), np.empty(n), np.empty(n)
+    most, far = caps
+    edges, indptr, indices = graph
+    row_start, bits, span, holds, shrink, hist_start = table
+    n, width = len(rate), bits.shape[1]
+    work = _workspace(len(edges), width)
+    joins = np.empty(len(hist_start) - 1, dtype=np.int64)
+    apart = np.empty(width, dtype=np.uint64)
+    uniform, key, wait = np.empty(n), np.empty(n), np.empty(n)
+    when, late = np.empty(n), np.empty(n)
+    order, row = np.empty(n, dtype=np.int64), np.empty(n, dtype=np.int64)
     time, who = np.empty(n), np.empty(n, dtype=np.int64)
-    theirs = np.empty(len(holder))
-    chosen = np.empty(n, dtype=np.int64)
-    held = np.zeros(n, dtype=np.int64)
-    mine = np.zeros(n, dtype=np.int64)
+    theirs, chosen = np.empty(len(motifs[3])), np.empty(n, dtype=np.int64)
+    held, mine = np.zeros(n, dtype=np.int64), np.zeros(n, dtype=np.int64)
     stamp = 0
     for d in range(len(words)):
-        _clocks(words[d], rate, strata, caps, uniform, key)
+        _clocks(words[d], rate, strata, most, uniform, key)
+        row[:] = bits.shape[0] - 1
+        apart[:] = 0
         for s in range(len(start) - 1):
-            if caps[s] > 0:
-                for i in range(start[s], start[s + 1]):
-                    wait[member[i]] = _ring(uniform[member[i]], 1.0)
-                _first(key, start[s], start[s + 1], caps[s], member, order[start[s] :])
-                for i in range(start[s], start[s] + caps[s]):
-                    v = order[i]
-                    when[i] = wait[v] / rate[v]
-                    late[i] = when[i] / shrink[v] if shrink[v] > 0.0 else np.inf
-        for m in range(len(part_start) - 1):
-            stamp += 1
-            k = 0
-            for q in range(part_start[m], part_start[m + 1]):
-                s = part_stratum[q]
-                first = holder_start[q]
-                size = holder_start[q + 1] - first
-                begin = start[s]
-                apart = False
-                if begin + size < start[s + 1]:
-                    limit = when[begin + size]
-                    for i in range(size):
-                        chosen[k + i] = order[begin + i]
-                        apart |= late[begin + i] > limit
-                else:
-                    for i in range(size):
-                        chosen[k + i] = member[begin + i]
-                if apart:
-                    for i in range(first, first + size):
-                        theirs[i] = wait[holder[i]] / own[i]
-                    _merge(
-                        (holder, first, size),
-                        (order, when, begin, begin + caps[s]),
-                        theirs,
-                        (time, who, mine, stamp),
-                        chosen[k:],
+            if most[s] == 0:
+                continue
+            begin = start[s]
+            for i in range(begin, start[s + 1]):
+                wait[member[i]] = _ring(uniform[member[i]], 1.0)
+            _first(key, begin, start[s + 1], far[s], member, order[begin:])
+            for r in range(far[s]):
+                when[begin + r] = wait[order[begin + r]] / rate[order[begin + r]]
+            for r in range(most[s]):
+                v = order[begin + r]
+                row[v] = row_start[s] + r
+                last = when[begin + r] / shrink[v]
+                late[begin + r] = last
+                # With n holders here, the next in line is at place n: from r + 1 on.
+                for n_held in range(r + 1, min(most[s], far[s] - 1) + 1):
+                    if last <= when[begin + n_held]:
+                        break
+                    has = row_start[s] + n_held - 1
+                    more = has + 1 if n_held < most[s] else bits.shape[0] - 1
+                    for w in range(span[has]):
+                        apart[w] |= bits[has, w] & ~bits[more, w] & holds[v, w]
+        _count_all(row, edges, bits, span, work, joins)
+        for w in range(width):
+            left = apart[w]
+            b = 0
+            while left != 0:
+                if left & np.uint64(1):
+                    stamp += 1
+                    joins[64 * w + b] = _count_merged(
+                        64 * w + b,
+                        (order, wait, when, late, far, holds),
+                        strata,
+                        (indptr, indices),
+                        motifs,
+                        (time, who, theirs, chosen, mine, held, stamp),
                     )
-                k += size
-            for i in range(k):
-                held[chosen[i]] = stamp
-            joins = 0
-            for i in range(k):
-                v = chosen[i]
-                for e in range(indptr[v], indptr[v + 1]):
-                    if held[indices[e]] == stamp:
-                        joins += 1
-            hist[hist_start[m] + joins] += 1
+                left >>= np.uint64(1)
+                b += 1
+        for m in range(len(joins)):
+            hist[hist_start[m] + joins[m]] += 1
 
 
 @nb.njit(nogil=True, cache=True)

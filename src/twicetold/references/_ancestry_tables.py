@@ -23,14 +23,25 @@ BLOCK = 4096
 
 
 @dataclass(frozen=True)
+class OwnTables:
+    """What ``count_own`` reads beside."""
+
+    far: IntArray
+    holds: npt.NDArray[np.uint64]
+    shrink: FloatArray
+    parts: tuple[IntArray, IntArray, IntArray, IntArray, FloatArray]
+
+
+@dataclass(frozen=True)
 class Block:
     """Motifs served together, and the tables the kernels read (see their docstrings)."""
 
     motifs: IntArray
-    caps: IntArray
+    most: IntArray
     edges: IntArray
-    table: tuple[npt.NDArray[np.generic], ...]
+    bits: tuple[IntArray, npt.NDArray[np.uint64], IntArray]
     hist_start: IntArray
+    own: OwnTables | None = None
 
 
 def group_members(code: npt.NDArray[np.integer]) -> tuple[IntArray, Csr]:
@@ -53,6 +64,7 @@ def blocks_of(
     counts: npt.NDArray[np.int32],
     groups: tuple[IntArray, Csr],
     edges: IntArray,
+    *,
     rate: FloatArray,
     holders: tuple[IntArray, IntArray, FloatArray | None],
 ) -> Iterator[Block]:
@@ -66,14 +78,15 @@ def blocks_of(
         live = edges[(most[code[edges[:, 0]]] > 0) & (most[code[edges[:, 1]]] > 0)]
         room = _largest_joins(part, code, live) + 1
         hist_start = np.concatenate([[0], np.cumsum(room)]).astype(np.int64)
-        table: tuple[npt.NDArray[np.generic], ...]
-        if holders[2] is None:
-            caps, table = most, _bit_rows(part, most)
-        else:
-            caps = np.minimum(np.diff(start), 2 * most)
-            shrink = _shrink(rate, holders[1], holders[2])
-            table = (*_parts(motifs, code, holders[0], holders[1], holders[2]), shrink)
-        yield Block(motifs, caps, live, table, hist_start)
+        own: OwnTables | None = None
+        if holders[2] is not None:
+            own = OwnTables(
+                far=np.minimum(np.diff(start), 2 * most),
+                holds=_bits_of_holders(motifs, holders[0], holders[1], len(rate)),
+                shrink=_shrink(rate, holders[1], holders[2]),
+                parts=_parts(motifs, code, holders[0], holders[1], holders[2]),
+            )
+        yield Block(motifs, most, live, _bit_rows(part, most), hist_start, own)
 
 
 def _largest_joins(part: npt.NDArray[np.int32], code: IntArray, edges: IntArray) -> IntArray:
@@ -85,9 +98,9 @@ def _largest_joins(part: npt.NDArray[np.int32], code: IntArray, edges: IntArray)
     for first in range(0, len(part), 256):
         block = part[first : first + 256].astype(np.int64)
         a, b = block[:, pairs[:, 0]], block[:, pairs[:, 1]]
-        out[first : first + 256] = np.minimum(
-            np.where(same, a * (a - 1) // 2, a * b), n_edges
-        ).sum(axis=1)
+        out[first : first + 256] = np.minimum(np.where(same, a * (a - 1) // 2, a * b), n_edges).sum(
+            axis=1
+        )
     return out
 
 
@@ -108,9 +121,19 @@ def _bit_rows(
     return row_start[:-1], rows, span.astype(np.int64)
 
 
+def _bits_of_holders(
+    motifs: IntArray, indptr: IntArray, indices: IntArray, n: int
+) -> npt.NDArray[np.uint64]:
+    """(n, W) one bit for each motif the tradition holds."""
+    has = np.zeros((n, 64 * -(-len(motifs) // 64)), dtype=bool)
+    for k, m in enumerate(motifs):
+        has[indices[indptr[m] : indptr[m + 1]], k] = True
+    return np.packbits(has, axis=1, bitorder="little").view("<u8").astype(np.uint64)
+
+
 def _parts(
     motifs: IntArray, code: IntArray, indptr: IntArray, indices: IntArray, own: FloatArray
-) -> tuple[npt.NDArray[np.generic], ...]:
+) -> tuple[IntArray, IntArray, IntArray, IntArray, FloatArray]:
     """Holders of each motif by group, with their own rates."""
     part_start, part_stratum, holder_start = [0], [], [0]
     holder, rates = [], []
@@ -134,17 +157,13 @@ def _parts(
 
 
 def _shrink(rate: FloatArray, indices: IntArray, own: FloatArray) -> FloatArray:
-    """Least own rate over common rate at each tradition; 0 everywhere if any is above 1."""
-    ratio = own / rate[indices]
+    """Least own rate over common rate at each tradition; 1 where nothing is held."""
     out = np.ones(len(rate))
-    np.minimum.at(out, indices, ratio)
-    # A holder that rings sooner at its own rate could enter from far behind: always merge then.
-    return out if np.all(ratio <= 1.0) else np.zeros(len(rate))
+    np.minimum.at(out, indices, own / rate[indices])
+    return out
 
 
-def log_configurations(
-    counts: npt.NDArray[np.int32], sizes: IntArray
-) -> npt.NDArray[np.float64]:
+def log_configurations(counts: npt.NDArray[np.int32], sizes: IntArray) -> npt.NDArray[np.float64]:
     """(M,) log of the number of configurations, prod_f C(N_f, n_f)."""
     from scipy.special import gammaln
 
@@ -153,9 +172,7 @@ def log_configurations(
     return np.asarray(logs.sum(axis=1), dtype=np.float64)
 
 
-def exact_law(
-    held: IntArray, rate: FloatArray, groups: tuple[IntArray, Csr], later: Csr
-) -> Law:
+def exact_law(held: IntArray, rate: FloatArray, groups: tuple[IntArray, Csr], later: Csr) -> Law:
     """Law of the joins over every configuration, by the Plackett-Luce chance of each."""
     code, (start, member) = groups
     strata, n_held = np.unique(code[held], return_counts=True)

@@ -75,7 +75,8 @@ class HolderSets:
         Tradition numbers; motif m is held by ``indices[indptr[m]:indptr[m + 1]]``.
     own : (H,) float64 or None
         Propensity of each holder when *its* motif is left out of the records, where propensities
-        come from the records themselves; None when motifs do not touch the propensities.
+        come from the records themselves (never above the common one, and the same as the common
+        one for those who do not hold the motif); None when motifs do not touch the propensities.
     """
 
     indptr: npt.NDArray[np.integer]
@@ -84,7 +85,9 @@ class HolderSets:
 
     @classmethod
     def of(
-        cls, holders: Iterable[Sequence[int] | npt.NDArray[np.integer]], own: FloatArray | None = None
+        cls,
+        holders: Iterable[Sequence[int] | npt.NDArray[np.integer]],
+        own: FloatArray | None = None,
     ) -> HolderSets:
         """Make the list from one sequence of holders per motif."""
         rows = [np.asarray(h, dtype=np.int64) for h in holders]
@@ -161,10 +164,10 @@ def ancestry_world(
     seed: int,
     pool: Pool | None = None,
 ) -> AncestryWorld:
-    """Compare each motif's joins between families with the world of descent alone.
+    r"""Compare each motif's joins between families with the world of descent alone.
 
     Given that :math:`n_f` of the :math:`N_f` traditions of family f hold the motif, the holders
-    are the first :math:`n_f` of the family to ring exponential clocks of rates :math:`\\lambda_i`.
+    are the first :math:`n_f` of the family to ring exponential clocks of rates :math:`\lambda_i`.
 
     Parameters
     ----------
@@ -196,7 +199,7 @@ def ancestry_world(
     pool = pool or ThreadPool()
     rate = _checked_rates(propensity, graph.n)
     if motifs.own is not None:
-        _checked_rates(motifs.own, len(motifs.indices))
+        _checked_own(motifs, rate)
     groups = tables.group_members(lineages.level)
     family = np.asarray(lineages.family)
     edges = graph.edges[family[graph.edges[:, 0]] != family[graph.edges[:, 1]]].astype(np.int64)
@@ -204,7 +207,9 @@ def ancestry_world(
     counts = _counts(motifs, groups[0], len(sizes))
     few = tables.log_configurations(counts, sizes) <= math.log(ENUMERATE) + 1e-9
     holders = (motifs.indptr.astype(np.int64), motifs.indices.astype(np.int64), motifs.own)
-    blocks = tables.blocks_of(np.flatnonzero(~few), counts, groups, edges, rate, holders)
+    blocks = tables.blocks_of(
+        np.flatnonzero(~few), counts, groups, edges, rate=rate, holders=holders
+    )
     setting = _Setting(
         seed, rate, groups, tables.later_neighbours(graph.n, edges), motifs, tuple(blocks)
     )
@@ -229,6 +234,17 @@ def _checked_rates(propensity: FloatArray, n: int) -> FloatArray:
             "out."
         )
     return rate
+
+
+def _checked_own(motifs: HolderSets, rate: FloatArray) -> None:
+    assert motifs.own is not None
+    own = _checked_rates(motifs.own, len(motifs.indices))
+    above = int((own > rate[motifs.indices]).sum())
+    if above:
+        raise TwicetoldError(
+            "A holder's own propensity (its motif left out) must not be above its common one, got "
+            f"{above} that are. Leave records out of the same totals that give the common one."
+        )
 
 
 def _counts(motifs: HolderSets, code: IntArray, n_groups: int) -> npt.NDArray[np.int32]:
@@ -278,6 +294,7 @@ def _drawn_laws(setting: _Setting, draws: int, pool: Pool) -> dict[int, Law]:
     chunks = [(k, min(CHUNK, draws - k * CHUNK)) for k in range(-(-draws // CHUNK))]
     keys = [(b, k, size) for b in range(len(setting.blocks)) for k, size in chunks]
     out: dict[int, Law] = {}
+    total = np.zeros(0, dtype=np.int64)
     for key, hist in zip(keys, pool.run(_chunk, setting, keys, label="ancestry"), strict=True):
         total = hist if key[1] == 0 else total + hist
         if key[1] == len(chunks) - 1:
@@ -296,11 +313,19 @@ def _chunk(setting: _Setting, key: tuple[int, int, int]) -> IntArray:
     block = setting.blocks[key[0]]
     words = chunk_words(setting.seed, Stream.ANCESTRY, key[1], draws=key[2])
     hist = np.zeros(block.hist_start[-1], dtype=np.int64)
-    strata = setting.groups[1]
-    if setting.motifs.own is None:
-        table = (*block.table, block.hist_start)
-        kernels.count_shared(words, setting.rate, strata, block.caps, block.edges, table, hist)
+    strata, own = setting.groups[1], block.own
+    if own is None:
+        table = (*block.bits, block.hist_start)
+        kernels.count_shared(words, setting.rate, strata, block.most, block.edges, table, hist)
     else:
-        table = (*block.table, block.hist_start)
-        kernels.count_own(words, setting.rate, strata, block.caps, setting.later, table, hist)
+        kernels.count_own(
+            words,
+            setting.rate,
+            strata,
+            (block.most, own.far),
+            (block.edges, *setting.later),
+            (*block.bits, own.holds, own.shrink, block.hist_start),
+            own.parts,
+            hist,
+        )
     return hist
