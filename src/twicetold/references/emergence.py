@@ -89,23 +89,23 @@ class EmergenceWorld:
             self._laws[statistic, n] = Law(values, weights, self.draws, effective=self.draws)
         return self._laws[statistic, n]
 
-    def moran_tail(self, n: int, threshold: int) -> float:
-        """Draws (or exact weight) whose Moran score at n holders is at least ``threshold``.
+    def moran_tail(self, n: int, thresholds: npt.ArrayLike) -> Floats:
+        """Draws (or exact weight) whose Moran score at n holders reaches each threshold.
 
         Raises
         ------
         TwicetoldError
-            When n was not asked for, or the threshold was not among those given before drawing.
+            When n was not asked for, or a threshold was not among those given before drawing.
         """
         if n in self.exact:
-            return self.exact[n].score_at_least(threshold)
+            return self.exact[n].score_at_least(thresholds)
         column = self._column(n)
         assert self.tails is not None
         try:
-            return float(self.tails.at_least(column, threshold))
-        except KeyError:
+            return self.tails.at_least(column, thresholds).astype(np.float64)
+        except KeyError as unknown:
             raise TwicetoldError(
-                f"The Moran score {threshold} at {n} holders was not given before drawing. Pass "
+                f"The Moran score {unknown} at {n} holders was not given before drawing. Pass "
                 "it in `moran_thresholds`."
             ) from None
 
@@ -117,13 +117,15 @@ class EmergenceWorld:
         assert self.tails is not None
         return moran_from_score(self.graph, n, int(self.tails.sums[column]) / self.draws)
 
-    def moran_p(self, n: int, threshold: int) -> float:
+    def moran_p(self, n: int, score: int) -> float:
         """P(Moran's I >= observed), the observed one given by its score."""
-        tail = self.moran_tail(n, threshold)
+        return float(self._moran_ps(n, score))
+
+    def _moran_ps(self, n: int, scores: npt.ArrayLike) -> Floats:
+        tail = self.moran_tail(n, scores)
         if n in self.exact:
-            total = float(self.exact[n].score_weights.sum())
-            return float(p_value(tail, total, exact=True))
-        return float(p_value(tail, self.draws))
+            return p_value(tail, float(self.exact[n].score_weights.sum()), exact=True)
+        return p_value(tail, self.draws)
 
     def p_values(
         self,
@@ -132,17 +134,19 @@ class EmergenceWorld:
         observed: npt.ArrayLike,
         direction: Direction = "many",
     ) -> Floats:
-        """(M,) p-values of many motifs; for ``moran_i`` ``observed`` holds Moran scores."""
+        """(M,) p-values of many motifs at once.
+
+        For ``moran_i`` ``observed`` holds Moran scores and the direction is always "many".
+        """
         n, value = np.asarray(holders), np.asarray(observed)
         out = np.empty(n.shape)
-        if statistic == "moran_i":
-            for k in range(len(n)):
-                out[k] = self.moran_p(int(n[k]), int(value[k]))
-            return out
         p = p_many if direction == "many" else p_few
         for count in np.unique(n):
             here = n == count
-            out[here] = p(self.law(statistic, int(count)), value[here])
+            if statistic == "moran_i":
+                out[here] = self._moran_ps(int(count), value[here])
+            else:
+                out[here] = p(self.law(statistic, int(count)), value[here])
         return out
 
     @cached_property

@@ -48,9 +48,11 @@ class ExactWorld:
     scores: npt.NDArray[np.int64]
     score_weights: Floats
 
-    def score_at_least(self, threshold: int) -> float:
-        """Weight of Moran scores of at least ``threshold``."""
-        return float(self.score_weights[self.scores >= threshold].sum())
+    def score_at_least(self, thresholds: npt.ArrayLike) -> Floats:
+        """Weight of Moran scores of at least each threshold."""
+        above = np.append(np.cumsum(self.score_weights[::-1])[::-1], 0.0)
+        tails: Floats = above[np.searchsorted(self.scores, np.asarray(thresholds))]
+        return tails
 
     def score_mean(self) -> float:
         """Mean Moran score."""

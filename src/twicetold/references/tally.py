@@ -110,16 +110,19 @@ class ScoreTails:
         self.hits += other.hits
         self.sums += other.sums
 
-    def at_least(self, c: int, threshold: int) -> int:
-        """Draws with a score of at least ``threshold``, which must be one of those observed.
+    def at_least(self, c: int, thresholds: npt.ArrayLike) -> Ints:
+        """Draws with a score of at least each threshold, which must be among those observed.
 
         Raises
         ------
         KeyError
-            When the threshold was not given before drawing.
+            When a threshold was not given before drawing.
         """
-        known = self.thresholds[self.start[c] : self.start[c + 1]]
-        k = int(np.searchsorted(known, threshold))
-        if k == len(known) or known[k] != threshold:
-            raise KeyError(threshold)
-        return int(self.hits[self.start[c] + k : self.start[c + 1]].sum())
+        span = slice(int(self.start[c]), int(self.start[c + 1]))
+        known, wanted = self.thresholds[span], np.asarray(thresholds, dtype=np.int64)
+        k = np.searchsorted(known, wanted)
+        found = (k < len(known)) & (np.append(known, 0)[k] == wanted)
+        if not np.all(found):
+            raise KeyError(int(wanted[~found].flat[0]))
+        tails: Ints = np.cumsum(self.hits[span][::-1])[::-1][k]
+        return tails

@@ -45,10 +45,19 @@ def moran_score(n_traditions: int, n: int, joins: int, degree_sum: int) -> int:
 
 def moran_from_score(graph: ContactGraph, n: int, score: float) -> float:
     """Moran's I of n holders from its (mean) score; NaN when it is not defined."""
-    if graph.n_edges == 0 or not 0 < n < graph.n:
-        return float("nan")
+    return float(moran_from_scores(graph, np.array([n]), np.array([score]))[0])
+
+
+def moran_from_scores(
+    graph: ContactGraph, n: npt.NDArray[np.int64], scores: npt.NDArray[np.int64 | np.float64]
+) -> npt.NDArray[np.float64]:
+    """(M,) Moran's I of motifs with (M,) holders and scores; NaN where it is not defined."""
+    if graph.n_edges == 0:
+        return np.full(len(n), np.nan)
     share = n / graph.n
-    return (score / (graph.n * graph.n_edges) + share**2) / (share * (1.0 - share))
+    spread = np.where((n > 0) & (n < graph.n), share * (1.0 - share), np.nan)
+    out: npt.NDArray[np.float64] = (scores / (graph.n * graph.n_edges) + share * share) / spread
+    return out
 
 
 def moran_i(graph: ContactGraph, holders: npt.ArrayLike) -> float:

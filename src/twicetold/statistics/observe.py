@@ -11,7 +11,7 @@ import numpy.typing as npt
 from twicetold.graph import ContactGraph
 from twicetold.statistics import _kernels
 from twicetold.statistics._check import family_array, holder_array
-from twicetold.statistics.moran import moran_from_score
+from twicetold.statistics.moran import moran_from_scores
 
 IntArray = npt.NDArray[np.int32]
 
@@ -82,18 +82,32 @@ def observe(
     TwicetoldError
         When holders or families do not fit the graph.
     """
-    held = [holder_array(graph.n, m) for m in motifs]
-    holders = np.array([len(h) for h in held], dtype=np.int64)
+    held = [np.asarray(m) for m in motifs]
+    holders = np.array([h.size for h in held], dtype=np.int64)
     starts = np.concatenate([[0], np.cumsum(holders)]).astype(np.int64)
-    flat = np.concatenate([*held, np.zeros(0, np.int32)]).astype(np.int32)
+    flat = np.concatenate([*(h for h in held if h.size), np.zeros(0, np.int32)])
+    if not _sound(graph.n, flat, holders) or any(h.ndim != 1 for h in held):
+        for motif in held:
+            holder_array(graph.n, motif)  # one of them raises, and says why
+    flat = flat.astype(np.int32)
     arrays = graph_arrays(graph, family_array(graph.n, family_codes))
     values = np.zeros((len(held), len(STATISTICS)), dtype=np.int32)
     scores = np.zeros(len(held), dtype=np.int64)
     _kernels.observe_sets(starts, flat, *arrays, values, scores)
-    moran = np.array(
-        [moran_from_score(graph, int(n), int(s)) for n, s in zip(holders, scores, strict=True)],
-        dtype=np.float64,
-    )
+    moran = moran_from_scores(graph, holders, scores)
     for array in (holders, values, scores, moran):
         array.flags.writeable = False
     return Observed(holders, values, scores, moran)
+
+
+def _sound(n: int, flat: npt.NDArray[np.generic], holders: npt.NDArray[np.int64]) -> bool:
+    """Whether all holders are tradition indices, none twice in a motif (checked all at once)."""
+    if flat.size == 0:
+        return True
+    if flat.dtype.kind not in "iu":
+        return False
+    whole = flat.astype(np.int64)
+    if whole.min() < 0 or whole.max() >= n:
+        return False
+    keys = np.sort(np.repeat(np.arange(len(holders)), holders) * n + whole)
+    return not bool(np.any(keys[1:] == keys[:-1]))
