@@ -141,8 +141,9 @@ class EmergenceWorld:
         n, value = np.asarray(holders), np.asarray(observed)
         out = np.empty(n.shape)
         p = p_many if direction == "many" else p_few
-        for count in np.unique(n):
-            here = n == count
+        by_count = np.argsort(n, kind="stable")
+        counts, first = np.unique(n[by_count], return_index=True)
+        for count, here in zip(counts, np.split(by_count, first[1:]), strict=True):
             if statistic == "moran_i":
                 out[here] = self._moran_ps(int(count), value[here])
             else:

@@ -12,11 +12,12 @@ def _root(link, i):  # type: ignore[no-untyped-def]
     """Root of i; links >= 0 point upward, a root holds minus its size. Halves the path."""
     up = link[i]
     while up >= 0:
-        above = link[up]
+        w = np.uint32(up)
+        above = link[w]
         if above < 0:
-            return up
+            return w
         link[i] = above
-        i = above
+        i = np.uint32(above)
         up = link[i]
     return i
 
@@ -24,6 +25,9 @@ def _root(link, i):  # type: ignore[no-untyped-def]
 @nb.njit(nogil=True, cache=True)
 def sweep(order, start, stop, column, indptr, indices, family, work, kin, epoch, out, scores):  # type: ignore[no-untyped-def]
     """Add traditions ``order[start:stop]`` one at a time and note every statistic on the way.
+
+    Indices are unsigned inside: a signed one is tested for being negative at every look-up, a
+    fifth of the time.
 
     Parameters
     ----------
@@ -55,8 +59,8 @@ def sweep(order, start, stop, column, indptr, indices, family, work, kin, epoch,
     largest = 0
     strands = 0
     for m in range(stop - start):
-        v = order[start + m]
-        f = family[v]
+        v = np.uint32(order[start + m])
+        f = np.uint32(family[v])
         mark[v] = epoch
         link[v] = -1
         clusters += 1
@@ -70,31 +74,31 @@ def sweep(order, start, stop, column, indptr, indices, family, work, kin, epoch,
         # Neighbours that hold, and those of another family, are gathered without a branch.
         met = 0
         apart = 0
-        for e in range(indptr[v], indptr[v + 1]):
-            u = indices[e]
-            near[met] = u
+        for e in range(np.uint32(indptr[v]), np.uint32(indptr[v + np.uint32(1)])):
+            u = np.uint32(indices[e])
+            near[met] = np.int32(u)
             held = mark[u] == epoch
             met += 1 if held else 0
-            apart += 1 if held & (family[u] != f) else 0
+            apart += 1 if held & (np.uint32(family[u]) != f) else 0
         joins += met
         cross += apart
         root = v
         for j in range(met):
-            u = near[j]
+            u = np.uint32(near[j])
             other = _root(link, u)
             if other == root:
                 continue
             # Union by size (Newman & Ziff 2001, Phys. Rev. E 64, 016706).
             size = link[root] + link[other]
             if link[other] < link[root]:
-                link[root] = other
+                link[root] = np.int32(other)
                 root = other
             else:
-                link[other] = root
+                link[other] = np.int32(root)
             link[root] = size
             clusters -= 1
             largest = max(largest, -size)
-            g = family[u]
+            g = np.uint32(family[u])
             if g != f:
                 # A strand is whole families, so its union-find runs over families; a join inside
                 # one cluster can never merge strands.
@@ -104,7 +108,7 @@ def sweep(order, start, stop, column, indptr, indices, family, work, kin, epoch,
                     both = kin_link[a] + kin_link[b]
                     if kin_link[b] < kin_link[a]:
                         a, b = b, a
-                    kin_link[b] = a
+                    kin_link[b] = np.int32(a)
                     kin_link[a] = both
                     strands -= 1
         c = column[m + 1]
