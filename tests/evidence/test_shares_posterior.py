@@ -22,12 +22,12 @@ def world(families=True):
 
 @pytest.fixture(scope="module")
 def bank():
-    return build_bank(world(), largest=40, seed=1, walks=3000, use_cache=False)
+    return build_bank(world(), largest=40, seed=1, walks=2500, use_cache=False)
 
 
 @pytest.fixture(scope="module")
 def fitted(bank):
-    return fit_posterior(bank, seed=1, steps=600)
+    return fit_posterior(bank, seed=1, steps=400)
 
 
 def sets():
@@ -70,7 +70,7 @@ def test_one_motif_alone_is_as_in_the_batch(fitted):
 
 
 def test_fit_is_the_same_for_any_number_of_workers(bank):
-    one, two = (fit_posterior(bank, seed=3, steps=60, pool=ThreadPool(w)) for w in (1, 2))
+    one, two = (fit_posterior(bank, seed=3, steps=30, pool=ThreadPool(w)) for w in (1, 2))
     np.testing.assert_array_equal(one.ensemble.parameters, two.ensemble.parameters)
     np.testing.assert_array_equal(one.sharpness, two.sharpness)
     np.testing.assert_array_equal(one.width, two.width)

@@ -25,10 +25,22 @@ def mixing_weights(likelihood, times, weight, rounds, tolerance):  # type: ignor
         for i in range(motifs):
             if times[i] == 0.0:
                 continue
-            mixed = 0.0
-            for k in range(points):
-                mixed += likelihood[i, k] * weight[k]
-            part = times[i] / mixed
+            # Four running sums: one alone would wait for each addition to end.
+            m0 = 0.0
+            m1 = 0.0
+            m2 = 0.0
+            m3 = 0.0
+            k = 0
+            while k + 4 <= points:
+                m0 += likelihood[i, k] * weight[k]
+                m1 += likelihood[i, k + 1] * weight[k + 1]
+                m2 += likelihood[i, k + 2] * weight[k + 2]
+                m3 += likelihood[i, k + 3] * weight[k + 3]
+                k += 4
+            while k < points:
+                m0 += likelihood[i, k] * weight[k]
+                k += 1
+            part = times[i] / ((m0 + m1) + (m2 + m3))
             for k in range(points):
                 factor[k] += part * likelihood[i, k]
         best = 0.0
