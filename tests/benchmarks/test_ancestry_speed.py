@@ -19,7 +19,7 @@ COMMAND = "pytest -m benchmark tests/benchmarks/test_ancestry_speed.py"
 
 
 def made_up_catalogue(n_traditions=1000, n_motifs=2200, n_families=60):
-    """Points on the sphere, compact families of unequal size, log-normal effort, log-series sizes."""
+    """Points on the sphere, compact families of unequal size, log-normal effort."""
     rng = np.random.default_rng(1)
     xyz = rng.normal(size=(n_traditions, 3))
     xyz /= np.linalg.norm(xyz, axis=1)[:, None]
