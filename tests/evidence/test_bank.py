@@ -263,6 +263,17 @@ def test_room_is_made_oldest_first(monkeypatch, own_cache):
     assert others.exists()
 
 
+def test_a_finished_bank_stays_even_when_it_alone_passes_the_limit(monkeypatch, own_cache):
+    old = open_entry({"k": 1})
+    old.write("piece", {"a": np.zeros(1000)})
+    os.utime(old.folder, (1e9, 1e9))
+    monkeypatch.setenv("TWICETOLD_CACHE_MB", "0")
+    build_bank(ladder_model(), largest=5, seed=1, walks=60)
+    (left,) = own_cache.glob("banks/*")
+    assert left != old.folder
+    assert len(list(left.glob("walks-*.bin"))) == 2
+
+
 def test_half_written_pieces_are_swept(own_cache):
     entry = open_entry({"k": 1})
     old, fresh = entry.folder / ".a.part-1-x", entry.folder / ".b.part-1-x"

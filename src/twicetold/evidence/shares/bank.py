@@ -130,6 +130,8 @@ def build_bank(
     joined = {name: np.concatenate([part[name] for part in parts]) for name in parts[0]}
     for array in joined.values():
         array.flags.writeable = False
+    if shared.entry is not None:
+        shared.entry.finish()
     return Bank(
         shares=joined["shares"],
         prior=joined["prior"],

@@ -87,6 +87,11 @@ class Entry:
         with suppress(OSError):
             os.utime(self.folder)
 
+    def finish(self) -> None:
+        """Mark the entry as just used and keep the cache within its limit."""
+        self.touch()
+        make_room(self.folder.parent, keep=self.folder.name)
+
 
 def cache_folder() -> Path:
     """Where finished work is kept: ``TWICETOLD_CACHE``, or the platform's folder for caches."""

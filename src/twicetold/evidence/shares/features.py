@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
@@ -84,7 +85,7 @@ class Scale:
     centre: FloatArray
     gain: FloatArray
 
-    def apply(self, values: FloatArray, holders: npt.ArrayLike) -> npt.NDArray[np.float32]:
+    def apply(self, values: npt.NDArray[Any], holders: npt.ArrayLike) -> npt.NDArray[np.float32]:
         """Standardise, and add the log number of holders as the last column; (S, D + 1)."""
         log = np.log(np.asarray(holders, dtype=np.float64))
         left, inside = hats(log, self.knots)
@@ -116,13 +117,13 @@ def holder_knots(smallest: int, largest: int) -> FloatArray:
 
 
 def fit_scale(
-    values: FloatArray, holders: npt.ArrayLike, weight: FloatArray, knots: FloatArray
+    values: npt.NDArray[Any], holders: npt.ArrayLike, weight: FloatArray, knots: FloatArray
 ) -> Scale:
     """Fit centre and gain as weighted averages around each knot.
 
     Parameters
     ----------
-    values : (S, D) float64
+    values : (S, D) float
     holders : (S,) int
     weight : (S,) float64
     knots : (Q,) float64
@@ -139,10 +140,11 @@ def fit_scale(
         return np.asarray(out / total)
 
     for k in range(values.shape[1]):
-        centre[:, k] = mean(values[:, k])
+        column = values[:, k].astype(np.float64)
+        centre[:, k] = mean(column)
         fitted = (1.0 - inside) * centre[left, k]
         fitted += inside * centre[np.minimum(left + 1, len(knots) - 1), k]
-        sd = np.sqrt(mean((values[:, k] - fitted) ** 2))
+        sd = np.sqrt(mean((column - fitted) ** 2))
         gain[:, k] = np.where(sd > _CONSTANT, 1.0 / np.maximum(sd, _CONSTANT), 0.0)
     for array in (centre, gain):
         array.flags.writeable = False

@@ -15,8 +15,8 @@ FloatArray = npt.NDArray[np.float64]
 
 #: Fewest rows around a number of holders from which a power is fitted.
 _FEWEST = 100
-#: Rows that give the mean width of intervals within about a percent.
-_ENOUGH = 600
+#: Rows that give the mean width of intervals within a few percent.
+_ENOUGH = 200
 
 
 def at_knots(values: FloatArray, holders: npt.ArrayLike, knots: FloatArray) -> FloatArray:

@@ -26,6 +26,8 @@ IntArray = npt.NDArray[np.int32]
 HELD_OUT = 10
 #: Networks, and steps of each one's training.
 MEMBERS, STEPS = 2, 3500
+#: Snapshots turned into features at a time.
+_BLOCK = 20_000
 #: Shares are refused where intervals are on average wider than this part of the prior's.
 NARROWER = 0.95
 
@@ -190,8 +192,8 @@ def _learnt(
     kept = bank.weight > 0.0
     holders = bank.counts[kept]
     weight = (bank.weight * bank.prior[:, None])[kept]
-    values = features(bank.summaries[kept], holders)
-    walk_of = np.nonzero(kept)[0]
+    walk_of, slot = np.nonzero(kept)
+    values = _features(bank, walk_of, slot)
     knots = holder_knots(int(holders.min()), int(holders.max()))
     scale = fit_scale(values, holders, weight, knots)
     inputs = scale.apply(values, holders)
@@ -219,6 +221,17 @@ def _learnt(
         "sharpness": sharpness,
         "width": check.width(where, knots, sharpness),
     }
+
+
+def _features(
+    bank: Bank, walk_of: npt.NDArray[np.intp], slot: npt.NDArray[np.intp]
+) -> npt.NDArray[np.float32]:
+    """Features of the bank's snapshots, block by block to spare memory; (S, D) float32."""
+    blocks = []
+    for at in range(0, len(walk_of), _BLOCK):
+        w, k = walk_of[at : at + _BLOCK], slot[at : at + _BLOCK]
+        blocks.append(features(bank.summaries[w, k], bank.counts[w, k]).astype(np.float32))
+    return np.concatenate(blocks)
 
 
 def route_shares(bank: Bank, holder_sets: Sequence[IntArray], *, seed: int) -> list[RouteShares]:
