@@ -103,6 +103,16 @@ def test_score_tails_equal_sorting():
         tails.at_least(0, 4)
 
 
+@pytest.mark.parametrize("spread", [40, 3000, 10**9])
+def test_score_tails_with_many_thresholds(spread):
+    rng = np.random.default_rng(spread)
+    scores = (rng.normal(size=(400, 1)) * spread).astype(np.int64)
+    known = np.unique(np.append((rng.normal(size=300) * spread).astype(np.int64), scores[:5]))
+    tails = ScoreTails(np.array([0, len(known)]), known)
+    tails.add(scores)
+    assert tails.at_least(0, known).tolist() == [int((scores >= t).sum()) for t in known]
+
+
 def test_chunk_is_what_a_seed_means():
     # Changing any of these changes every published number.
     assert (CHUNK, _kernels.BATCH, _kernels.WASTE) == (1000, 16, 2)

@@ -34,8 +34,7 @@ class Engine(NamedTuple):
     weights: Floats
     table: tuple[npt.NDArray[np.int32], Floats, npt.NDArray[np.int32]]
     column: npt.NDArray[np.int32]
-    start: npt.NDArray[np.int64]
-    thresholds: npt.NDArray[np.int64]
+    tails: ScoreTails
 
 
 def check_propensity(n: int, propensity: npt.ArrayLike) -> Floats:
@@ -123,8 +122,7 @@ def make_engine(
         weights=weights,
         table=table_of(weights),
         column=column,
-        start=start,
-        thresholds=np.concatenate([*known, np.zeros(0, np.int64)]),
+        tails=ScoreTails(start, np.concatenate([*known, np.zeros(0, np.int64)])),
     )
 
 
@@ -132,7 +130,7 @@ def draw_chunk(engine: Engine, k: int) -> tuple[Tally, ScoreTails]:
     """Draw and count one chunk (runs on any thread or machine)."""
     size = min(CHUNK, engine.draws - k * CHUNK)
     words = chunk_words(engine.seed, engine.stream, k, draws=size)
-    rows = len(engine.start) - 1
+    rows = len(engine.tails.sums)
     noted = rows * len(STATISTICS)
     block = max(1, min(size, _NOTED // (noted + len(engine.column))))
     indptr, indices, family, work, kin = engine.arrays
@@ -141,7 +139,7 @@ def draw_chunk(engine: Engine, k: int) -> tuple[Tally, ScoreTails]:
     values = np.empty((block, rows, len(STATISTICS)), dtype=np.int32)
     scores = np.empty((block, rows), dtype=np.int64)
     counts = Tally.empty(noted)
-    tails = ScoreTails(engine.start, engine.thresholds)
+    tails = engine.tails.fresh()
     for first in range(0, size, block):
         now = min(block, size - first)
         _kernels.draw_orders(

@@ -182,26 +182,31 @@ def pour(low, start, counts, new_low, new_start, new_counts):  # type: ignore[no
 
 
 @nb.njit(nogil=True, cache=True)
-def score_tails(scores, start, thresholds, hits, sums):  # type: ignore[no-untyped-def]
+def score_tails(scores, start, thresholds, shift, first, reached, hits, sums):  # type: ignore[no-untyped-def]
     """Count scores by the largest threshold they reach, and sum them.
 
-    ``thresholds[start[c]:start[c + 1]]`` increase; ``hits`` (T,) int64 and ``sums`` (K,) int64 are
-    added to. A tail count is the sum of the hits of its threshold and all above it.
+    ``thresholds[start[c]:start[c + 1]]`` increase. A score is looked up through buckets of width
+    2**shift[c] from the lowest threshold: ``reached[first[c] + b]`` thresholds lie at or below the
+    lower end of bucket b, and the few left are tried in turn, so the time hardly grows with the
+    number of thresholds. ``hits`` (T,) int64 and ``sums`` (K,) int64 are added to. A tail count is
+    the sum of the hits of its threshold and all above it.
     """
     for b in range(scores.shape[0]):
         for c in range(scores.shape[1]):
             value = scores[b, c]
             sums[c] += value
             low = start[c]
-            high = start[c + 1]
-            while low < high:
-                middle = (low + high) // 2
-                if thresholds[middle] <= value:
-                    low = middle + 1
-                else:
-                    high = middle
-            if low > start[c]:
-                hits[low - 1] += 1
+            end = start[c + 1]
+            if low == end or value < thresholds[low]:
+                continue
+            if value >= thresholds[end - 1]:
+                hits[end - 1] += 1
+                continue
+            bucket = (value - thresholds[low]) >> shift[c]
+            low += reached[first[c] + bucket]
+            while thresholds[low] <= value:
+                low += 1
+            hits[low - 1] += 1
 
 
 @nb.njit(nogil=True, cache=True)

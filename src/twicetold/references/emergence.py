@@ -246,7 +246,7 @@ def emergence_world(
         graph, family, weights, drawn, moran_thresholds, source=(seed, stream, draws)
     )
     total = Tally.empty(len(drawn) * len(STATISTICS))
-    tails = ScoreTails(engine.start, engine.thresholds)
+    tails = engine.tails.fresh()
     chunks = range(-(-draws // CHUNK))
     for part, part_tails in (pool or ThreadPool()).run(
         draw_chunk, engine, chunks, label="emergence"

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from copy import copy
 from dataclasses import dataclass, field
 
 import numpy as np
@@ -97,13 +98,25 @@ class ScoreTails:
     hits: Ints = field(init=False)
     sums: Ints = field(init=False)
 
+    _buckets: tuple[Ints, Ints, Ints] = field(init=False, repr=False)
+
     def __post_init__(self) -> None:
         self.hits = np.zeros(len(self.thresholds), dtype=np.int64)
         self.sums = np.zeros(len(self.start) - 1, dtype=np.int64)
+        self._buckets = _buckets_of(self.start, self.thresholds)
+
+    def fresh(self) -> ScoreTails:
+        """Give an empty one with the same thresholds."""
+        out = copy(self)
+        out.hits, out.sums = np.zeros_like(self.hits), np.zeros_like(self.sums)
+        return out
 
     def add(self, scores: Ints) -> None:
         """Count ``scores`` (B, K) int64."""
-        _kernels.score_tails(scores, self.start, self.thresholds, self.hits, self.sums)
+        shift, first, reached = self._buckets
+        _kernels.score_tails(
+            scores, self.start, self.thresholds, shift, first, reached, self.hits, self.sums
+        )
 
     def merge(self, other: ScoreTails) -> None:
         """Add the counts of another of the same thresholds."""
@@ -126,3 +139,20 @@ class ScoreTails:
             raise KeyError(int(wanted[~found].flat[0]))
         tails: Ints = np.cumsum(self.hits[span][::-1])[::-1][k]
         return tails
+
+
+def _buckets_of(start: Ints, thresholds: Ints) -> tuple[Ints, Ints, Ints]:
+    """Lay buckets over each count's thresholds, at most two for each; see the kernel."""
+    shift = np.zeros(len(start) - 1, dtype=np.int64)
+    reached = []
+    for c in range(len(start) - 1):
+        known = thresholds[start[c] : start[c + 1]]
+        span = int(known[-1] - known[0]) if len(known) else 0
+        while span >> int(shift[c]) >= max(2 * len(known), 1):
+            shift[c] += 1
+        lower = np.arange((span >> int(shift[c])) + 1, dtype=np.int64) << shift[c]
+        reached.append(
+            np.searchsorted(known, known[0] + lower, side="right") if len(known) else lower * 0
+        )
+    first = np.concatenate([[0], np.cumsum([len(r) for r in reached])]).astype(np.int64)
+    return shift, first, np.concatenate([*reached, np.zeros(0, np.int64)]).astype(np.int64)
