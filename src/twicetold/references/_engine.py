@@ -18,7 +18,7 @@ from twicetold.statistics.observe import STATISTICS, graph_arrays
 #: Draws in one chunk of work. Part of what a seed means: never change it.
 CHUNK = 1_000
 #: Whole numbers noted between two rounds of counting; bounds the memory of a thread.
-_NOTED = 1 << 17
+_NOTED = 1 << 19
 
 Floats = npt.NDArray[np.float64]
 Thresholds = Mapping[int, npt.ArrayLike]

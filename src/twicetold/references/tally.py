@@ -61,20 +61,23 @@ class Tally:
         return (self.low + np.diff(self.start) - 1).astype(np.int32)
 
     def _hold(self, low: npt.NDArray[np.int32], high: npt.NDArray[np.int32]) -> None:
-        """Widen the histograms to hold values from ``low`` to ``high``, with room to spare."""
+        """Widen the histograms that must hold values from ``low`` to ``high``, with some room."""
         if len(self.counts):
             old_high = self._high()
-            if np.all(low >= self.low) and np.all(high <= old_high):
+            under, over = low < self.low, high > old_high
+            if not (under.any() or over.any()):
                 return
             low, high = np.minimum(low, self.low), np.maximum(high, old_high)
+        else:
+            under = over = np.ones(len(low), dtype=bool)
         room = (high - low) // 4 + 2
-        new_low = (low - np.where(low < self.low, room, 0)) if len(self.counts) else low - room
-        new_high = high + room
+        new_low = np.where(under, low - room, low).astype(np.int32)
+        new_high = np.where(over, high + room, high)
         start = np.concatenate([[0], np.cumsum(new_high.astype(np.int64) - new_low + 1)])
         counts = np.zeros(int(start[-1]), dtype=np.int64)
         if len(self.counts):
             _kernels.pour(self.low, self.start, self.counts, new_low, start, counts)
-        self.low, self.start, self.counts = new_low.astype(np.int32), start, counts
+        self.low, self.start, self.counts = new_low, start, counts
 
 
 @dataclass
