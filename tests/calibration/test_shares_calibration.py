@@ -264,8 +264,8 @@ def test_route_shares_are_calibrated(tmp_path_factory):
 def misstated(fitted):
     say("", "## Turnover misstated", "", "The bank believes x = .95; the truth is another.", "")
     say("| true x " + HEAD[0], "|---" + HEAD[1])
-    for x in (0.9, 0.975, 0.99):
-        other = snapshots(made_up_world(x), fitted.map, 4000)
+    for x in (0.5, 0.9, 0.975, 0.99):
+        other = snapshots(made_up_world(x), fitted.map, 3000)
         for k, n in enumerate(COUNTS.tolist()):
             if n in (10, 30, 100):
                 use = other[1][:, k] > 0

@@ -9,9 +9,10 @@ from scipy.stats import beta
 from twicetold.evidence.shares import network
 from twicetold.evidence.shares._network_kernels import matmul, softmax, train_steps, weights_of
 from twicetold.evidence.shares._network_plain import score_plain, weights_plain
+from twicetold.evidence.shares.bank import draw_shares, drawn_density
 from twicetold.evidence.shares.heldout import HeldOut, sharpened
 from twicetold.evidence.shares.network import Lessons, starting_parameters, train
-from twicetold.evidence.shares.simplex import simplex
+from twicetold.evidence.shares.simplex import hat_masses, simplex
 from twicetold.workers import ThreadPool
 
 
@@ -22,7 +23,9 @@ def problem(rows=300, width=9, seed=1):
     inputs = rng.normal(size=(rows, width)).astype(np.float32)
     sizes = np.array([width, 12, 10, where.basis.shape[1]])
     start = starting_parameters(sizes, rng)
-    lessons = Lessons(inputs, knots, factors.astype(np.float32), rng.exponential(size=rows))
+    lessons = Lessons(
+        inputs, knots, factors.astype(np.float32), rng.exponential(size=rows), where.prior
+    )
     return where, lessons, sizes, start
 
 
@@ -46,7 +49,7 @@ def test_softmax_holds_single_precision_over_its_range():
 
 def test_weights_match_the_twin_and_do_not_hang_on_company():
     where, lessons, sizes, start = problem()
-    stage = network._stage(where)
+    stage = network._stage(where, where.prior)
     out = np.empty((300, len(where.knots)), dtype=np.float32)
     weights_of(lessons.inputs, start, sizes, *stage, out)
     expected, _ = weights_plain(lessons.inputs, start, sizes, where)
@@ -74,7 +77,7 @@ def test_gradient_is_that_of_the_twin_and_of_differences():
     parameters, first, second = start.copy(), np.zeros_like(start), np.zeros_like(start)
     told = train_steps(
         lessons.inputs, lessons.knots, lessons.factors, lessons.weight, np.arange(64), 64,
-        *network._stage(where), parameters, first, second, sizes, 0, 10, 1e-3, 0.0,
+        *network._stage(where, where.prior), parameters, first, second, sizes, 0, 10, 1e-3, 0.0,
     )  # fmt: skip
     assert told == pytest.approx(score, rel=1e-4)
     np.testing.assert_allclose(first * 10, gradient, rtol=2e-3, atol=2e-6)
@@ -93,7 +96,11 @@ def binomial_lessons(rows=30_000, trials=20):
     shares = np.stack([emergence, 1 - emergence, np.zeros(rows)], axis=1)
     knots, factors = where.density_factors(shares)
     inputs = np.stack([(seen / trials - 0.5) * 3, np.ones(rows)], axis=1).astype(np.float32)
-    return where, seen, Lessons(inputs, knots, factors.astype(np.float32), np.ones(rows))
+    return (
+        where,
+        seen,
+        Lessons(inputs, knots, factors.astype(np.float32), np.ones(rows), where.prior),
+    )
 
 
 def test_learns_a_posterior_known_exactly():
@@ -149,3 +156,20 @@ def test_sharpening_leaves_the_prior_alone():
     where = simplex(3)
     out = sharpened(where.prior[None], where.prior, np.array([1.7]))
     np.testing.assert_allclose(out[0], where.prior)
+
+
+def test_flat_prior_takes_the_place_of_the_one_drawn_from():
+    # Shares drawn with density 1/2 + 2 (s**7 + (1 - s)**7); the answer is still the beta law. [E]
+    where = simplex(2)
+    rng = np.random.default_rng(8)
+    shares, prior = draw_shares(rng, 40_000, 2)
+    assert prior.std() > 0.3
+    seen = rng.binomial(20, shares[:, 0])
+    knots, factors = where.density_factors(shares)
+    inputs = np.stack([(seen / 20 - 0.5) * 3, np.ones(40_000)], axis=1).astype(np.float32)
+    drawn = hat_masses(2, drawn_density)
+    lessons = Lessons(inputs, knots, factors.astype(np.float32), np.ones(40_000), drawn)
+    ensemble = train(lessons, where, seed=1, members=2, steps=800, pool=ThreadPool(2))
+    for k in (0, 1, 5, 10, 19, 20):
+        mean = (ensemble.weights(inputs[seen == k][:1]) @ where.centre)[0, 0]
+        assert mean == pytest.approx((k + 1) / 22, abs=0.02)

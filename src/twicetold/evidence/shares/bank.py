@@ -35,8 +35,10 @@ KEPT = 12
 SMALLEST = 2
 #: Counts are drawn up to this many times the largest: the network is weakest at the ends.
 _BEYOND = 1.15
-#: Part of the walks drawn towards the edges and corners of the simplex, where a flat draw is thin.
-_EDGE = 0.2
+#: Part of the walks drawn flat; the rest goes to corners and edges, where a flat draw is thin.
+_FLAT = 0.5
+#: Powers of the densities towards a corner (a share near 1) and an edge (a share near 0).
+_CORNER, _EDGE = 7, 6
 
 
 @dataclass(frozen=True)
@@ -183,7 +185,7 @@ def _what_it_depends_on(
         "cap": cap,
         "seed": seed,
         "walks": walks,
-        "design": (CHUNK, KEPT, SMALLEST, _EDGE, _BEYOND),
+        "design": (CHUNK, KEPT, SMALLEST, _BEYOND, _FLAT, _CORNER, _EDGE),
         "summaries": SUMMARIES,
     }
 
@@ -226,23 +228,46 @@ def _chunk(shared: _Shared, key: int) -> dict[str, npt.NDArray[Any]]:
 
 
 def draw_shares(rng: np.random.Generator, size: int, routes: int) -> tuple[FloatArray, FloatArray]:
-    """Draw shares: most from the flat density, some towards edges and corners.
+    """Draw shares: half flat, the others towards corners and edges (corners only for two routes).
 
     Returns
     -------
     shares : (size, 3) float64
     prior : (size,) float64
-        Flat density over the density drawn from, at most 1 / (1 - 0.2).
+        Flat density over the density drawn from, at most 2.
     """
     shares = np.zeros((size, 3))
-    edge = rng.random(size) < _EDGE
     shares[:, :routes] = rng.dirichlet(np.ones(routes), size)
-    shares[edge, :routes] = rng.dirichlet(np.full(routes, 0.5), int(edge.sum()))
+    kind, route = rng.random(size), rng.integers(0, routes, size)
+    corners = (1.0 + _FLAT) / 2.0 if routes == 3 else 1.0
+    # Density s**7 towards a corner, (1 - s)**6 towards an edge; what is left is split evenly.
+    towards = np.where(
+        kind < corners,
+        rng.beta(_CORNER + 1, routes - 1, size),
+        rng.beta(1, _EDGE + routes - 1, size),
+    )
+    split = rng.random(size)
+    for row in np.flatnonzero(kind >= _FLAT):
+        r = route[row]
+        left = 1.0 - towards[row]
+        shares[row, r] = towards[row]
+        shares[row, (r + 1) % routes] = left if routes == 2 else left * split[row]
+        if routes == 3:
+            shares[row, (r + 2) % routes] = left * (1.0 - split[row])
     shares = np.maximum(shares, 0.0)
-    # Dirichlet(1/2, ...) over the flat density: 1 / (c prod sqrt(s)), c = 2 pi or pi.
-    root = np.sqrt(np.prod(np.maximum(shares[:, :routes], 1e-12), axis=1))
-    ratio = 1.0 / ((4.0 * np.pi if routes == 3 else np.pi) * root)
-    return shares, 1.0 / (1.0 - _EDGE + _EDGE * ratio)
+    return shares, 1.0 / drawn_density(shares, routes)
+
+
+def drawn_density(shares: FloatArray, routes: int) -> FloatArray:
+    """Density that :func:`draw_shares` draws from, over the flat one; bounded and smooth."""
+    s = shares[:, :routes]
+    # Dirichlet(8, 1, 1) over the flat density of 2 is 36 s**7; Beta(8, 1) over 1 is 8 s**7.
+    corner = (36.0 if routes == 3 else 8.0) * s**_CORNER
+    if routes == 2:
+        return np.asarray(_FLAT + (1.0 - _FLAT) * corner.mean(axis=1))
+    edge = 4.0 * (1.0 - s) ** _EDGE
+    rest = (1.0 - _FLAT) / 2.0
+    return np.asarray(_FLAT + rest * corner.mean(axis=1) + rest * edge.mean(axis=1))
 
 
 def draw_counts(rng: np.random.Generator, size: int, largest: int) -> npt.NDArray[np.int32]:

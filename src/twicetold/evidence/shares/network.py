@@ -1,10 +1,11 @@
 """A small ensemble of networks from features to a density over the simplex.
 
 Each network has two hidden layers, which give a log density made of smooth functions of the shares,
-laid over the hats of :mod:`simplex`; it is trained to
-the log density it gives to the shares each snapshot truly came from. That score is proper (Gneiting
-& Raftery 2007, JASA 102:359): its best answer is the posterior under the prior the bank was drawn
-from. Minibatch steps are Adam's (Kingma & Ba 2015).
+laid over the hats of :mod:`simplex`; it is trained to the log density it gives to the shares each
+snapshot truly came from. That score is proper (Gneiting & Raftery 2007, JASA 102:359): its best
+answer is the posterior under the prior the bank was drawn from. What the network itself gives is
+that posterior's logarithm without the prior, a log likelihood: laid over the flat prior it is the
+posterior wanted. Minibatch steps are Adam's (Kingma & Ba 2015).
 """
 
 from __future__ import annotations
@@ -46,12 +47,15 @@ class Lessons:
         The density of the true shares over the prior is ``sum(weights[knots] * factors)``.
     weight : (S,) float64
         Importance of each snapshot.
+    drawn : (G,) float64
+        Probability of each hat under the density the true shares were drawn from.
     """
 
     inputs: Float32
     knots: npt.NDArray[np.int64]
     factors: Float32
     weight: FloatArray
+    drawn: FloatArray
 
 
 @dataclass(frozen=True)
@@ -71,10 +75,10 @@ class Ensemble:
     where: Simplex
 
     def weights(self, inputs: Float32) -> FloatArray:
-        """Average the members' knot weights; (S, G), rows sum to 1 but for rounding."""
+        """Average the members' knot weights under the flat prior; (S, G), rows sum to 1."""
         total = np.zeros((len(inputs), len(self.where.knots)))
         out = np.empty(total.shape, dtype=np.float32)
-        basis, base = _stage(self.where)
+        basis, base = _stage(self.where, self.where.prior)
         for member in self.parameters:
             weights_of(inputs, member, self.sizes, basis, base, out)
             total += out
@@ -102,9 +106,9 @@ def starting_parameters(sizes: npt.NDArray[np.int64], rng: np.random.Generator) 
     return np.concatenate(parts).astype(np.float32)
 
 
-def _stage(where: Simplex) -> tuple[Float32, Float32]:
+def _stage(where: Simplex, prior: FloatArray) -> tuple[Float32, Float32]:
     """Basis and log prior in single precision."""
-    return np.ascontiguousarray(where.basis, np.float32), np.log(where.prior).astype(np.float32)
+    return np.ascontiguousarray(where.basis, np.float32), np.log(prior).astype(np.float32)
 
 
 def train(
@@ -162,7 +166,7 @@ def _segment(
         lessons.weight,
         learner.order[learner.taken * batch : stop * batch],
         batch,
-        *_stage(where),
+        *_stage(where, lessons.drawn),
         learner.parameters,
         learner.first,
         learner.second,

@@ -10,12 +10,12 @@ import numpy as np
 import numpy.typing as npt
 
 from twicetold.evidence.results import RouteShares
-from twicetold.evidence.shares.bank import SMALLEST, Bank
+from twicetold.evidence.shares.bank import SMALLEST, Bank, drawn_density
 from twicetold.evidence.shares.features import Scale, features, fit_scale, holder_knots
 from twicetold.evidence.shares.heldout import HeldOut, at_knots, sharpened
 from twicetold.evidence.shares.landscape import Landscape
 from twicetold.evidence.shares.network import Ensemble, Lessons, train
-from twicetold.evidence.shares.simplex import Simplex, simplex
+from twicetold.evidence.shares.simplex import Simplex, hat_masses, simplex
 from twicetold.spread import ROUTES, SpreadError
 from twicetold.workers import Pool, ThreadPool
 
@@ -205,7 +205,9 @@ def _learnt(
         inputs[use],
         around[use],
         factors[use].astype(np.float32),
-        np.asarray(weight[use] / weight[use].mean()),
+        # Under the density drawn from; the flat prior comes in afterwards.
+        np.asarray(bank.weight[kept][use] / bank.weight[kept][use].mean()),
+        hat_masses(bank.routes, drawn_density),
     )
     ensemble = train(lessons, where, seed=seed, members=members, steps=steps, pool=pool)
     check = HeldOut(

@@ -8,6 +8,7 @@ knot is ``weight / prior`` exactly, which is the likelihood ratio a mixture over
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 from functools import lru_cache
 
@@ -157,6 +158,15 @@ def _quadrature(routes: int) -> FloatArray:
     e = np.concatenate([(i[up] + 1 / 3) / m, (i[down] + 2 / 3) / m])
     c = np.concatenate([(j[up] + 1 / 3) / m, (j[down] + 2 / 3) / m])
     return np.stack([e, c, np.maximum(1.0 - e - c, 0.0)], axis=1)
+
+
+def hat_masses(routes: int, density: Callable[[FloatArray, int], FloatArray]) -> FloatArray:
+    """(G,) probability of each hat's part of another density (given over the flat one)."""
+    points = _quadrature(routes)
+    around, inside = _locate(points, routes)
+    part = inside * density(points, routes)[:, None]
+    mass = np.bincount(around.ravel(), part.ravel(), len(simplex(routes).knots))
+    return np.asarray(mass / mass.sum())
 
 
 def _polynomials(shares: FloatArray, routes: int) -> FloatArray:
