@@ -78,7 +78,7 @@ def test_speed():
         "",
         "## Growth",
         "",
-        "A walk takes about 2 cap / (1 - x) events (the h-transformed climb gains (1 - x)/(1 + x) "
+        "A walk takes about 4 cap / (1 - x) events (the h-transformed climb gains (1 - x)/(1 + x) "
         "a step, and so does the way down lose), each some tens of operations whatever N; one "
         "snapshot costs its holders times the traditions within four hops. Measured, one thread, "
         "milliseconds a walk (twelve summarised snapshots included):",

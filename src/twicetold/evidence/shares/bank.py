@@ -35,6 +35,8 @@ KEPT = 12
 SMALLEST = 2
 #: Counts are drawn up to this many times the largest: the network is weakest at the ends.
 _BEYOND = 1.15
+#: Walks timed to estimate what a bank will cost.
+_TIMED = CHUNK
 #: Part of the walks drawn flat; the rest goes to corners and edges, where a flat draw is thin.
 _FLAT = 0.5
 #: Powers of the densities towards a corner (a share near 1) and an edge (a share near 0).
@@ -294,7 +296,8 @@ def estimate_cost(
 ) -> float:
     """Seconds a bank will take, from a few timed walks (compilation left out).
 
-    The estimate is of the walks and their summaries; training adds up to half a minute.
+    The estimate is of the walks and their summaries; training adds up to half a minute. It takes
+    threads to share the work evenly: on a busy machine half as much again has been seen.
 
     Parameters
     ----------
@@ -303,8 +306,8 @@ def estimate_cost(
     workers : int
         Threads the walks are shared by.
     """
-    shared = _prepare(model, largest=largest, seed=seed, walks=16, use_cache=False)
+    shared = _prepare(model, largest=largest, seed=seed, walks=_TIMED, use_cache=False)
     _chunk(dataclasses.replace(shared, walks=1), 0)
     begun = time.perf_counter()
     _chunk(shared, 0)
-    return (time.perf_counter() - begun) / 16 * walks / workers
+    return (time.perf_counter() - begun) / _TIMED * walks / workers
