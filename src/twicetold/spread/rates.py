@@ -284,14 +284,10 @@ def match_contact(
     p = log_series(turnover, graph.n)[least : largest + 1]
     target = float(span @ p / p.sum())
     rare = RARE / graph.n
-    # A holder has `degree` edges at most: below 1/100 of a loss per degree nothing spreads.
-    low, high = 0.01 / float(graph.degree.max()), 10.0
-    for _ in range(40):
-        if high / low < 1.01:
-            break
-        middle = float(np.sqrt(low * high))
+
+    def too_few(rate: float) -> bool:
         world = rate_world(
-            RateModel(graph, middle, rare),
+            RateModel(graph, rate, rare),
             [largest],
             excursions=excursions,
             seed=seed,
@@ -300,6 +296,14 @@ def match_contact(
             longest=20_000 + 200 * largest,
         )
         there = world.time[least : largest + 1]
-        mean = float(span @ there / there.sum()) if there.sum() > 0.0 else 0.0
-        low, high = (middle, high) if mean < target else (low, middle)
+        return not there.sum() > 0.0 or float(span @ there / there.sum()) < target
+
+    # A holder has `degree` edges at most, so at 1/10 of a loss per edge little spreads; going up
+    # from there stays clear of the rates at which motifs become endemic.
+    low = high = 0.1 / float(graph.degree.max())
+    while too_few(high) and high < 100.0:
+        low, high = high, 1.5 * high
+    while high / low > 1.01:
+        middle = float(np.sqrt(low * high))
+        low, high = (middle, high) if too_few(middle) else (low, middle)
     return float(np.sqrt(low * high))
