@@ -31,7 +31,7 @@ def test_parity(name, longest):
         words,
         graph.indptr,
         graph.indices,
-        int(graph.degree.max()),
+        max(1, int(graph.degree.max())),
         *rates,
         longest,
         slots,

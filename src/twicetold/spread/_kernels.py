@@ -17,15 +17,6 @@ TRIES = 48
 
 
 @nb.njit(nogil=True, cache=True)
-def _boundary_change(i, held, indptr, indices):  # type: ignore[no-untyped-def]
-    """Holder-non-holder edges gained when i, whose own flag is not counted, becomes a holder."""
-    change = np.int64(0)
-    for k in range(indptr[i], indptr[i + 1]):
-        change += 1 - 2 * np.int64(held[indices[k]])
-    return change
-
-
-@nb.njit(nogil=True, cache=True)
 def _pick_emergence(state, n, m, held, cumulative):  # type: ignore[no-untyped-def]
     """Non-holder drawn in proportion to its propensity (uniformly when all of theirs are 0)."""
     total = cumulative[n - 1]
@@ -59,27 +50,40 @@ def _pick_emergence(state, n, m, held, cumulative):  # type: ignore[no-untyped-d
 
 
 @nb.njit(nogil=True, cache=True)
-def _pick_contact(  # type: ignore[no-untyped-def]
-    state, m, boundary, holders, held, indptr, indices, max_degree, onward
-):
-    """Non-holder reached across a uniformly chosen boundary edge, then carried onward."""
-    found = -1
+def pick_contact(state, m, holders, held, indptr, indices, max_degree, onward):  # type: ignore[no-untyped-def]
+    """Non-holder reached across a uniformly chosen boundary edge, then carried onward; -1 if none.
+
+    Blind tries pick a holder and one of ``max_degree`` edge numbers and are taken again when that
+    edge does not exist or ends on a holder; so every boundary edge is equally likely. Only when
+    they all fail are the boundary edges counted, which also tells whether there are any.
+    """
+    found = np.int64(-1)
+    last_edge = len(indices) - 1
     for _ in range(TRIES):
         j = holders[next_below(state, m)]
         k = next_below(state, max_degree)
-        if k < indptr[j + 1] - indptr[j]:
-            v = indices[indptr[j] + k]
-            if held[v] == 0:
-                found = v
-                break
+        start = indptr[j]
+        exists = k < indptr[j + 1] - start
+        # Read some edge in any case: one unpredictable branch instead of two.
+        v = indices[min(start + k * exists, last_edge)] if last_edge >= 0 else 0
+        if exists and held[v] == 0:
+            found = np.int64(v)
+            break
     if found < 0:
+        boundary = 0
+        for h in range(m):
+            j = holders[h]
+            for k in range(indptr[j], indptr[j + 1]):
+                boundary += 1 - held[indices[k]]
+        if boundary == 0:
+            return found
         skip = next_below(state, boundary)
         for h in range(m):
             j = holders[h]
             for k in range(indptr[j], indptr[j + 1]):
                 if held[indices[k]] == 0:
                     if skip == 0:
-                        found = indices[k]
+                        found = np.int64(indices[k])
                     skip -= 1
             if skip < 0:
                 break
@@ -88,7 +92,7 @@ def _pick_contact(  # type: ignore[no-untyped-def]
         while next_double(state) < onward:
             place = indices[indptr[place] + next_below(state, indptr[place + 1] - indptr[place])]
             if held[place] == 0:
-                found = place
+                found = np.int64(place)
     return found
 
 
@@ -150,7 +154,6 @@ def walk_kernel(  # type: ignore[no-untyped-def]
                 free[f] = family_start[f + 1] - family_start[f]
         m = 0
         seen = 0
-        boundary = 0
         before = True
         emerged = 0
         carried = 0
@@ -160,7 +163,6 @@ def walk_kernel(  # type: ignore[no-untyped-def]
         while True:
             if gained >= 0:
                 # A gain: `gained` becomes a holder.
-                boundary += _boundary_change(gained, held, indptr, indices)
                 held[gained] = 1
                 holders[m] = gained
                 position[gained] = m
@@ -171,7 +173,6 @@ def walk_kernel(  # type: ignore[no-untyped-def]
                 moved = holders[next_below(state, m)]
                 m -= 1
                 held[moved] = 0
-                boundary -= _boundary_change(moved, held, indptr, indices)
                 last = holders[m]
                 holders[position[moved]] = last
                 position[last] = position[moved]
@@ -222,21 +223,23 @@ def walk_kernel(  # type: ignore[no-untyped-def]
             gained = -1
             by_kin = kin and route >= until_contact
             by_contact = not by_kin and route >= until_emergence
-            if by_contact and boundary == 0 and spill:
-                by_kin = kin
-            if by_kin:
-                teller = holders[next_below(state, m)]
-                f = family[teller]
-                if free[f] > 0:
-                    gained = members[family_start[f] + next_below(state, free[f])]
-                    inherited += 1
+            if by_contact:
+                gained = pick_contact(state, m, holders, held, indptr, indices, max_degree, onward)
+                if gained >= 0:
+                    carried += 1
                 elif spill:
-                    by_contact = True
-            if gained < 0 and by_contact and boundary > 0:
-                gained = _pick_contact(
-                    state, m, boundary, holders, held, indptr, indices, max_degree, onward
-                )
-                carried += 1
+                    by_kin = kin
+            if by_kin:
+                f = family[holders[next_below(state, m)]]
+                if free[f] > 0:
+                    gained = np.int64(members[family_start[f] + next_below(state, free[f])])
+                    inherited += 1
+                elif spill and route >= until_contact:
+                    gained = pick_contact(
+                        state, m, holders, held, indptr, indices, max_degree, onward
+                    )
+                    if gained >= 0:
+                        carried += 1
             if gained < 0:
                 gained = _pick_emergence(state, n, m, held, cumulative)
                 emerged += 1

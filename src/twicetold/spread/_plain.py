@@ -39,14 +39,16 @@ def pick_emergence(stream: PlainStream, held: set[int], cumulative: list[float])
 
 def pick_contact(
     stream: PlainStream, holders: list[int], neighbours: list[list[int]], onward: float
-) -> int:
+) -> int | None:
     """Non-holder across a uniformly chosen boundary edge, carried on a geometric number of steps.
+
+    None without boundary edges.
 
     Every further step goes to a uniformly chosen neighbour; the gain falls to the last non-holder
     the walk stood on.
     """
     held = set(holders)
-    most = max(len(near) for near in neighbours)
+    most = max(1, *(len(near) for near in neighbours))
     found = -1
     for _ in range(TRIES):
         near = neighbours[holders[stream.below(len(holders))]]
@@ -56,6 +58,8 @@ def pick_contact(
             break
     if found < 0:
         boundary = [v for j in holders for v in neighbours[j] if v not in held]
+        if not boundary:
+            return None
         found = boundary[stream.below(len(boundary))]
     place = found
     while onward > 0.0 and stream.double() < onward:
@@ -172,18 +176,30 @@ def _gain(  # noqa: PLR0917
     emergence, contact, inheritance = t.shares
     route = stream.double()
     held = set(holders)
-    boundary = any(v not in held for j in holders for v in neighbours[j])
     by_kin = inheritance > 0.0 and route >= emergence + contact
     by_contact = not by_kin and route >= emergence
-    if by_kin or (by_contact and t.spill and not boundary and inheritance > 0.0):
+
+    def told() -> int | None:
+        gained = pick_contact(stream, holders, neighbours, t.onward)
+        routes[1] += gained is not None
+        return gained
+
+    def inherited() -> int | None:
         free = kin.free[kin.family[holders[stream.below(len(holders))]]]
-        if free:
-            routes[2] += 1
-            return free[stream.below(len(free))]
-        by_contact = by_contact or t.spill
-    if by_contact and boundary:
-        routes[1] += 1
-        return pick_contact(stream, holders, neighbours, t.onward)
+        if not free:
+            return None
+        routes[2] += 1
+        return free[stream.below(len(free))]
+
+    ways = [told] if by_contact else [inherited] if by_kin else []
+    if t.spill and by_contact and inheritance > 0.0:
+        ways.append(inherited)
+    if t.spill and by_kin:
+        ways.append(told)
+    for way in ways:
+        gained = way()
+        if gained is not None:
+            return gained
     routes[0] += 1
     return pick_emergence(stream, held, cumulative)
 

@@ -7,7 +7,16 @@ import numba as nb
 import numpy as np
 
 from twicetold._sfc64 import next_below, next_double, seed_state
-from twicetold.spread._kernels import _boundary_change, _pick_contact
+from twicetold.spread._kernels import pick_contact
+
+
+@nb.njit(nogil=True, cache=True)
+def _boundary_change(i, held, indptr, indices):  # type: ignore[no-untyped-def]
+    """Holder-non-holder edges gained when i, whose own flag is not counted, becomes a holder."""
+    change = np.int64(0)
+    for k in range(indptr[i], indptr[i + 1]):
+        change += 1 - 2 * np.int64(held[indices[k]])
+    return change
 
 
 @nb.njit(nogil=True, cache=True)
@@ -97,7 +106,7 @@ def rate_kernel(  # type: ignore[no-untyped-def]
             if which < by_contact:
                 gain = True
                 moved = np.int64(
-                    _pick_contact(state, m, boundary, order, held, indptr, indices, max_degree, 0.0)
+                    pick_contact(state, m, order, held, indptr, indices, max_degree, 0.0)
                 )
             elif which < by_contact + by_itself:
                 gain = True

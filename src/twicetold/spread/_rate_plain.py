@@ -55,7 +55,9 @@ def rate_plain(
         which = stream.double() * total
         gain = which < contact * boundary + spontaneous * (n - m)
         if which < contact * boundary:
-            moved = pick_contact(stream, holders, neighbours, 0.0)
+            across = pick_contact(stream, holders, neighbours, 0.0)
+            assert across is not None  # a contact only happens across a boundary edge
+            moved = across
         elif gain:
             moved = order[m + stream.below(n - m)]
         else:

@@ -220,7 +220,7 @@ def chain_tables(model: SpreadModel, cap: int) -> ChainTables:
         n=n,
         indptr=model.graph.indptr,
         indices=model.graph.indices,
-        max_degree=int(model.graph.degree.max()),
+        max_degree=max(1, int(model.graph.degree.max())),
         cumulative=np.cumsum(propensity / propensity.sum()),
         family=codes,
         n_families=n_families,

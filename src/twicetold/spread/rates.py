@@ -174,7 +174,7 @@ def _run(job: _Job, piece: tuple[int, int]) -> _Part:
         words,
         graph.indptr,
         graph.indices,
-        int(graph.degree.max()),
+        max(1, int(graph.degree.max())),
         job.model.contact,
         job.model.spontaneous,
         job.model.loss,
