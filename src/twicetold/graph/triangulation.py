@@ -95,7 +95,7 @@ def _stretch(xyz: FloatArray) -> tuple[FloatArray, float]:
     """Give an affine image of the points whose hull has the same faces, but is not thin.
 
     A region of radius θ bulges only by θ²/2; seen from above its middle, with the horizontal
-    divided by θ and the drop by θ², it is a bowl as deep as it is wide, whatever its size.
+    divided by θ and the drop by θ², it is a dome as high as it is wide, whatever its size.
     """
     mean = xyz.mean(axis=0)
     up = mean / max(float(np.linalg.norm(mean)), 1e-300)
@@ -107,7 +107,7 @@ def _stretch(xyz: FloatArray) -> tuple[FloatArray, float]:
     squared = (flat**2).sum(axis=1)
     scale = float(np.sqrt(squared.max()))
     drop = squared / (1 + np.sqrt(1 - squared))  # 1 - cos, without cancellation
-    return np.column_stack([flat / scale, drop / scale**2]), scale
+    return np.column_stack([flat / scale, -drop / scale**2]), scale
 
 
 def _plane(points: FloatArray, *, tolerance: float) -> tuple[FloatArray, bool]:
@@ -166,13 +166,17 @@ def _face_offset(xyz: FloatArray, corners: npt.NDArray[np.int64]) -> float:
 
 
 def _hull(points: FloatArray) -> Pairs:
-    """(F, 3) triangles of the convex hull, every point a corner and every edge in two of them."""
+    """(F, 3) triangles of the hull, anticlockwise from outside; all points, every edge twice."""
     for options in ("Qt", "QJ Pp"):
         try:
-            faces = ConvexHull(points, qhull_options=options).simplices.astype(np.int64)
+            hull = ConvexHull(points, qhull_options=options)
         except QhullError:
             continue
+        faces = hull.simplices.astype(np.int64)
         if len(np.unique(faces)) == len(points) and len(faces) == 2 * len(points) - 4:
+            a, b, c = points[faces.T]
+            inward = np.einsum("ij,ij->i", np.cross(b - a, c - a), hull.equations[:, :3]) < 0
+            faces[inward] = faces[inward][:, ::-1]
             return np.asarray(faces)
     raise GraphError(
         "The traditions lie too close together, or too nearly on one circle, to be triangulated. "
@@ -199,13 +203,17 @@ def _on_one_circle(
 ) -> npt.NDArray[np.bool_]:
     """Whether the four corners of the two triangles on an edge lie on one circle.
 
-    The volume they span is of order (size)^4 in general and zero on a circle.
+    The outward normals of the triangles are the corners of the Voronoi cells, so the angle between
+    them, (volume) · (edge) / (area · area), is the length of the border the two cells share. It is
+    nothing when it is a billionth of the edge, or when the volume is no more than rounding.
     """
     a = xyz[edge[:, 0]]
-    arms = np.stack([xyz[edge[:, 1]] - a, xyz[p] - a, xyz[q] - a], axis=1)
-    size2 = (arms**2).sum(axis=2).max(axis=1)
-    volume = np.abs(np.einsum("ij,ij->i", arms[:, 0], np.cross(arms[:, 1], arms[:, 2])))
-    return np.asarray(volume <= _RELATIVE * size2**2 + _DUST * size2)
+    to_b, to_p, to_q = xyz[edge[:, 1]] - a, xyz[p] - a, xyz[q] - a
+    bp, bq, pq = np.cross(to_b, to_p), np.cross(to_b, to_q), np.cross(to_p, to_q)
+    volume = np.abs(np.einsum("ij,ij->i", to_b, pq))
+    area_p, area_q, area_pq = (np.linalg.norm(x, axis=1) for x in (bp, bq, pq))
+    dust = _DUST * (area_p + area_q + area_pq)
+    return np.asarray(volume <= _RELATIVE * area_p * area_q + dust)
 
 
 def _inner_faces(
@@ -219,11 +227,9 @@ def _inner_faces(
     normal = np.cross(arm1, arm2)
     area = np.linalg.norm(normal, axis=1)
     normal /= area[:, None]
-    inside = xyz.mean(axis=0)
-    normal *= -np.sign(np.einsum("ij,ij->i", normal, inside - corner[:, 0]))[:, None]
     offset = np.einsum("ij,ij->i", normal, corner[:, 0])
-    size2 = np.maximum((arm1**2).sum(axis=1), (arm2**2).sum(axis=1))
-    inner = offset > _RELATIVE + _DUST / size2
+    longest = np.sqrt(np.maximum((arm1**2).sum(axis=1), (arm2**2).sum(axis=1)))
+    inner = offset > _RELATIVE + _DUST * longest / area
     # A face of many triangles is judged by its largest one; the others may be slivers.
     biggest = np.empty(count, dtype=np.int64)
     order = np.argsort(area, kind="stable")
