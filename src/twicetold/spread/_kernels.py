@@ -10,10 +10,16 @@ from __future__ import annotations
 import numba as nb
 import numpy as np
 
-from twicetold._sfc64 import next_below, next_double, seed_state
+from twicetold._sfc64 import next_below, next_double, next_u64, seed_state
 
 #: Blind tries to hit a boundary edge or a non-holder before the exact scan takes over.
 TRIES = 48
+
+#: A de Bruijn number of order 6: multiplied by a power of two, its top six bits name the power.
+_DE_BRUIJN = 0x03F79D71B4CB0A89
+_POWER_OF = np.zeros(64, dtype=np.int64)
+for _k in range(64):
+    _POWER_OF[((_DE_BRUIJN << _k) % 2**64) >> 58] = _k
 
 
 @nb.njit(nogil=True, cache=True)
@@ -50,6 +56,27 @@ def _pick_emergence(state, n, m, held, cumulative):  # type: ignore[no-untyped-d
 
 
 @nb.njit(nogil=True, cache=True)
+def two_below(state, a, b):  # type: ignore[no-untyped-def]
+    """Two independent uniform numbers below a and b (each < 2**32) from the halves of one word.
+
+    Multiply and shift, each half without bias by rejection (Lemire 2019, TOMACS 29(1)).
+    """
+    bound_a, bound_b = np.uint64(a), np.uint64(b)
+    low = np.uint64(0xFFFFFFFF)
+    while True:
+        word = next_u64(state)
+        first = (word >> np.uint64(32)) * bound_a
+        second = (word & low) * bound_b
+        if (first & low) < bound_a or (second & low) < bound_b:
+            # Seldom (about (a + b) / 2**32): look whether the half must be thrown away.
+            if (first & low) < np.uint64(0x100000000) % bound_a:
+                continue
+            if (second & low) < np.uint64(0x100000000) % bound_b:
+                continue
+        return np.int64(first >> np.uint64(32)), np.int64(second >> np.uint64(32))
+
+
+@nb.njit(nogil=True, cache=True)
 def pick_contact(state, m, holders, held, indptr, indices, max_degree, onward):  # type: ignore[no-untyped-def]
     """Non-holder reached across a uniformly chosen boundary edge, then carried onward; -1 if none.
 
@@ -60,8 +87,8 @@ def pick_contact(state, m, holders, held, indptr, indices, max_degree, onward): 
     found = np.int64(-1)
     last_edge = len(indices) - 1
     for _ in range(TRIES):
-        j = holders[next_below(state, m)]
-        k = next_below(state, max_degree)
+        h, k = two_below(state, m, max_degree)
+        j = holders[h]
         start = indptr[j]
         exists = k < indptr[j + 1] - start
         # Read some edge in any case: one unpredictable branch instead of two.
@@ -273,19 +300,16 @@ def summary_kernel(bits, counts, weight, indptr, indices, family, n_families, ou
             count = 0
             for k in range(n_words):
                 word = bits[w, s, k]
-                i = k << 6
                 while word != np.uint64(0):
-                    while word & np.uint64(255) == np.uint64(0):
-                        word >>= np.uint64(8)
-                        i += 8
-                    if word & np.uint64(1) != np.uint64(0):
-                        holders[count] = i
-                        held[i] = 1
-                        parent[i] = i
-                        size[i] = 1
-                        count += 1
-                    word >>= np.uint64(1)
-                    i += 1
+                    rest = word & (word - np.uint64(1))
+                    lowest = word ^ rest
+                    i = (k << 6) + _POWER_OF[(lowest * np.uint64(_DE_BRUIJN)) >> np.uint64(58)]
+                    word = rest
+                    holders[count] = i
+                    held[i] = 1
+                    parent[i] = i
+                    size[i] = 1
+                    count += 1
             joins = 0
             cross = 0
             clusters = count
@@ -311,7 +335,7 @@ def summary_kernel(bits, counts, weight, indptr, indices, family, n_families, ou
                         largest = max(largest, size[a])
                         clusters -= 1
             strands = clusters
-            for h in range(count):
+            for h in range(count if n_families < n else 0):
                 i = holders[h]
                 f = family[i]
                 if first[f] < 0:

@@ -37,6 +37,15 @@ def pick_emergence(stream: PlainStream, held: set[int], cumulative: list[float])
     return [i for i in rest if steps[i] > 0.0][-1]
 
 
+def two_below(stream: PlainStream, a: int, b: int) -> tuple[int, int]:
+    """Two uniform numbers below a and b from the halves of one word."""
+    while True:
+        word = stream.u64()
+        first, second = (word >> 32) * a, (word % 2**32) * b
+        if first % 2**32 >= 2**32 % a and second % 2**32 >= 2**32 % b:
+            return first >> 32, second >> 32
+
+
 def pick_contact(
     stream: PlainStream, holders: list[int], neighbours: list[list[int]], onward: float
 ) -> int | None:
@@ -51,8 +60,8 @@ def pick_contact(
     most = max(1, *(len(near) for near in neighbours))
     found = -1
     for _ in range(TRIES):
-        near = neighbours[holders[stream.below(len(holders))]]
-        k = stream.below(most)
+        h, k = two_below(stream, len(holders), most)
+        near = neighbours[holders[h]]
         if k < len(near) and near[k] not in held:
             found = near[k]
             break
