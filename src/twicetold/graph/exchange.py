@@ -203,7 +203,7 @@ def _gal_pairs(name: str, lines: list[str]) -> Iterator[tuple[str, str]]:
     """Pairs of a GAL file: a header, then for each id a line `id count` and a line of ids."""
     header = lines[0].split() if lines else []
     size = header[0] if len(header) == 1 else "".join(header[1:2])
-    if not size.isdecimal():
+    if not (size.isdecimal() and header[0].isdecimal()):
         raise GraphError(f"{name}, line 1: a GAL file starts with the number of traditions.")
     words = iter([(w, row) for row, line in enumerate(lines[1:], 2) for w in line.split()])
     blocks = 0
