@@ -12,7 +12,6 @@ import time
 import numpy as np
 import pytest
 
-from conftest import as_contact_graph
 from twicetold.evidence.shares import bank as bank_module
 from twicetold.evidence.shares import build_bank, cache_folder, clear_cache, estimate_cost
 from twicetold.evidence.shares.bank import CHUNK, KEPT, draw_counts, draw_shares, drawn_density
@@ -20,6 +19,7 @@ from twicetold.evidence.shares.cache import Entry, key_of, make_room, open_entry
 from twicetold.evidence.shares.simplex import _quadrature, hat_masses, simplex
 from twicetold.spread import SpreadError, SpreadModel
 from twicetold.workers import ThreadPool
+from zoo import as_contact_graph
 
 FIELDS = ("shares", "prior", "counts", "weight", "summaries")
 

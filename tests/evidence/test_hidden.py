@@ -5,7 +5,6 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from conftest import as_contact_graph
 from twicetold.errors import TwicetoldError
 from twicetold.evidence import _hidden_kernels as kernels
 from twicetold.evidence import _hidden_plain as plain
@@ -22,6 +21,7 @@ from twicetold.graph import build_graph, great_circle_km
 from twicetold.randomness import Stream, chunk_words
 from twicetold.references.emergence import emergence_world
 from twicetold.workers import ThreadPool
+from zoo import as_contact_graph
 
 
 @pytest.fixture(scope="module")

@@ -5,11 +5,11 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from conftest import as_contact_graph
 from twicetold.evidence.shares import build_bank, fit_posterior, route_shares
 from twicetold.evidence.shares.bank import Bank
 from twicetold.spread import SpreadError, SpreadModel
 from twicetold.workers import ThreadPool
+from zoo import as_contact_graph
 
 
 def world(families=True):

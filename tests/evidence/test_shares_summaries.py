@@ -5,12 +5,12 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from conftest import as_contact_graph, small_graphs
 from twicetold.evidence.shares import landscape as landscape_module
 from twicetold.evidence.shares._kernels import SUMMARIES, unpack_bits
 from twicetold.evidence.shares._plain import hops_from, summary_plain
 from twicetold.evidence.shares.features import features, fit_scale, holder_knots
 from twicetold.evidence.shares.landscape import landscape
+from zoo import as_contact_graph, small_graphs
 
 
 def grid_graph(rows, columns):

@@ -5,12 +5,12 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from conftest import as_contact_graph, small_graphs
 from twicetold.evidence.confidence import BETA, ConfidenceSet, Point, Prevalence, confidence_set
 from twicetold.evidence.scatter import Transmission, at_reach, scatter_worlds
 from twicetold.references.pvalue import p_few, p_many
 from twicetold.spread.recording import recorded_probability
 from twicetold.spread.turnover import log_series
+from zoo import as_contact_graph, small_graphs
 
 PATH5 = [(0, 1), (1, 2), (2, 3), (3, 4)]
 

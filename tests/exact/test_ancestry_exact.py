@@ -8,12 +8,12 @@ import numpy as np
 import pytest
 from scipy import stats
 
-from conftest import as_contact_graph, small_graphs
 from twicetold.references import _ancestry_plain as plain
 from twicetold.references import ancestry
 from twicetold.references._ancestry_tables import _prefix_weights, _subsets
 from twicetold.references.ancestry import HolderSets, Lineages, ancestry_world
 from twicetold.references.pvalue import p_attainable, p_many
+from zoo import as_contact_graph, small_graphs
 
 
 def prefix_chance(rate, chosen):

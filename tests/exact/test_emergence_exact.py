@@ -6,7 +6,6 @@ from math import comb
 import numpy as np
 import pytest
 
-from conftest import as_contact_graph, small_graphs
 from twicetold.randomness import Stream
 from twicetold.references import _plain, emergence
 from twicetold.references.emergence import (
@@ -20,6 +19,7 @@ from twicetold.references.pvalue import p_attainable, p_many
 from twicetold.statistics import STATISTICS, _kernels, join_moments, observe
 from twicetold.statistics._check import family_array
 from twicetold.statistics.observe import graph_arrays
+from zoo import as_contact_graph, small_graphs
 
 ZOO = small_graphs()
 

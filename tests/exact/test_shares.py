@@ -8,9 +8,9 @@ from itertools import combinations
 import numpy as np
 from test_spread_solver import Solver
 
-from conftest import as_contact_graph
 from twicetold.evidence.shares import build_bank, fit_posterior, simplex
 from twicetold.spread import SpreadModel
+from zoo import as_contact_graph
 
 EDGES = [(0, 1), (1, 2), (2, 3), (3, 4), (4, 5)]
 FAMILY = np.array([0, 0, 1, 1, 2, 0])

@@ -6,9 +6,9 @@ import numpy as np
 import pytest
 from test_spread_solver import Solver
 
-from conftest import as_contact_graph
 from twicetold.randomness import Stream, chunk_words
 from twicetold.spread import STATISTICS, SpreadModel, chain_tables, walk_chunk
+from zoo import as_contact_graph
 
 WALKS = 20_000
 

@@ -11,9 +11,9 @@ import numpy as np
 import pytest
 from test_spread_solver import pieces
 
-from conftest import as_contact_graph, small_graphs
 from twicetold.spread import STATISTICS
 from twicetold.spread.rates import RateModel, rate_world
+from zoo import as_contact_graph, small_graphs
 
 COMPLETE5 = [(i, j) for j in range(5) for i in range(j)]
 PATH3 = [(0, 1), (1, 2)]

@@ -6,9 +6,9 @@ from scipy.sparse import csr_array
 from scipy.sparse.csgraph import shortest_path
 from sphere_points import globe
 
-from conftest import as_contact_graph, small_graphs
 from twicetold.errors import GraphError
 from twicetold.graph import _kernels, _plain, build_graph, components, hop_distances, summarise
+from zoo import as_contact_graph, small_graphs
 
 ZOO = small_graphs()
 

@@ -6,7 +6,7 @@ from contextlib import closing
 import numpy as np
 import pytest
 
-from conftest import as_contact_graph
+from zoo import as_contact_graph
 
 with warnings.catch_warnings():
     warnings.simplefilter("ignore")  # what these libraries warn of while loading is theirs

@@ -4,8 +4,8 @@ import numpy as np
 import pytest
 from statsmodels.stats.proportion import proportion_confint
 
-from conftest import as_contact_graph
 from twicetold.statistics import join_moments
+from zoo import as_contact_graph
 
 
 def graph_with(n, n_edges, meetings, seed=0):

@@ -5,13 +5,13 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from conftest import as_contact_graph
 from twicetold.errors import TwicetoldError
 from twicetold.randomness import Stream, chunk_words
 from twicetold.references import _ancestry_plain as plain
 from twicetold.references import ancestry
 from twicetold.references.ancestry import HolderSets, Lineages, ancestry_world
 from twicetold.workers import ThreadPool
+from zoo import as_contact_graph
 
 DRAWS = 100
 

@@ -4,7 +4,6 @@ import numpy as np
 import pytest
 from scipy import stats
 
-from conftest import as_contact_graph
 from twicetold.errors import TwicetoldError
 from twicetold.randomness import Stream
 from twicetold.references.emergence import (
@@ -17,6 +16,7 @@ from twicetold.references.emergence import (
 from twicetold.references.pvalue import p_many
 from twicetold.statistics import STATISTICS, observe
 from twicetold.workers import ThreadPool
+from zoo import as_contact_graph
 
 
 def ring_lattice(n, reach=3):

@@ -5,13 +5,13 @@ from collections import Counter
 import numpy as np
 import pytest
 
-from conftest import as_contact_graph, small_graphs
 from twicetold.randomness import Stream, chunk_words
 from twicetold.references import _kernels, _plain, emergence
 from twicetold.references._engine import CHUNK, table_of
 from twicetold.references.emergence import emergence_world
 from twicetold.references.tally import ScoreTails, Tally
 from twicetold.statistics import STATISTICS
+from zoo import as_contact_graph, small_graphs
 
 ZOO = small_graphs()
 WEIGHTS = {

@@ -7,7 +7,6 @@ import warnings
 import numpy as np
 import pytest
 
-from conftest import as_contact_graph
 from twicetold.errors import TwicetoldError, TwicetoldWarning
 from twicetold.randomness import Stream, chunk_words
 from twicetold.references import _margins_plain as plain
@@ -15,6 +14,7 @@ from twicetold.references.margins import View, _observe, _run, _table, margins_w
 from twicetold.references.pvalue import p_many
 from twicetold.statistics import observe
 from twicetold.workers import ThreadPool
+from zoo import as_contact_graph
 
 
 def a_catalogue(seed, n=30, motifs=40, surveys=3):

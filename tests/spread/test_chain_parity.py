@@ -5,10 +5,10 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from conftest import as_contact_graph, small_graphs
 from twicetold.randomness import Stream, chunk_words
 from twicetold.spread import SpreadError, SpreadModel, cap_for, chain_tables, walk_chunk
 from twicetold.spread._plain import summary_plain, walk_plain
+from zoo import as_contact_graph, small_graphs
 
 SETTINGS = {
     "contact": ((0.0, 1.0, 0.0), 1.0, False),

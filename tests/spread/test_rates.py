@@ -5,7 +5,6 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from conftest import as_contact_graph, small_graphs
 from twicetold.randomness import Stream
 from twicetold.spread import SpreadError
 from twicetold.spread._rate_kernels import rate_kernel
@@ -14,6 +13,7 @@ from twicetold.spread.rates import RARE, RateModel, match_contact, rate_world
 from twicetold.spread.turnover import log_series
 from twicetold.spread.world import spread_words
 from twicetold.workers import ThreadPool
+from zoo import as_contact_graph, small_graphs
 
 
 @pytest.mark.parametrize("name", small_graphs())

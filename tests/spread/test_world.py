@@ -6,11 +6,11 @@ import numpy as np
 import pytest
 from test_spread_solver import PATH5, Solver
 
-from conftest import as_contact_graph, small_graphs
 from twicetold.references.pvalue import p_few
 from twicetold.spread import SpreadError, SpreadModel, cap_for, chain_tables, spread_world
 from twicetold.spread.world import effective_size, expected_events, spread_words, work_size
 from twicetold.workers import ThreadPool
+from zoo import as_contact_graph, small_graphs
 
 
 def model(x=0.9, **more):

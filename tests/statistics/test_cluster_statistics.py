@@ -5,7 +5,6 @@ from itertools import combinations
 import numpy as np
 import pytest
 
-from conftest import as_contact_graph, small_graphs
 from twicetold.statistics import (
     STATISTICS,
     _plain,
@@ -16,6 +15,7 @@ from twicetold.statistics import (
     observe,
     strands,
 )
+from zoo import as_contact_graph, small_graphs
 
 ZOO = small_graphs()
 

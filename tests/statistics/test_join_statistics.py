@@ -8,9 +8,9 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from conftest import as_contact_graph, small_graphs
 from twicetold.errors import TwicetoldError
 from twicetold.statistics import join_counts, join_moments, local_joins
+from zoo import as_contact_graph, small_graphs
 
 ZOO = small_graphs()
 

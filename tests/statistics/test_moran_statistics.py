@@ -5,7 +5,6 @@ from itertools import combinations, permutations
 import numpy as np
 import pytest
 
-from conftest import as_contact_graph, small_graphs
 from twicetold.errors import TwicetoldError
 from twicetold.statistics import (
     join_counts,
@@ -15,6 +14,7 @@ from twicetold.statistics import (
     moran_of_values,
     moran_score,
 )
+from zoo import as_contact_graph, small_graphs
 
 ZOO = {k: v for k, v in small_graphs().items() if v[1]}
 
