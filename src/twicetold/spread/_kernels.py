@@ -55,7 +55,7 @@ def _pick_emergence(state, n, m, held, cumulative):  # type: ignore[no-untyped-d
     return -1
 
 
-@nb.njit(nogil=True, cache=True)
+@nb.njit(nogil=True, cache=True, inline="always")
 def two_below(state, a, b):  # type: ignore[no-untyped-def]
     """Two independent uniform numbers below a and b (each < 2**32) from the halves of one word.
 
@@ -76,7 +76,7 @@ def two_below(state, a, b):  # type: ignore[no-untyped-def]
         return np.int64(first >> np.uint64(32)), np.int64(second >> np.uint64(32))
 
 
-@nb.njit(nogil=True, cache=True)
+@nb.njit(nogil=True, cache=True, inline="always")
 def pick_contact(state, m, holders, held, indptr, indices, max_degree, onward):  # type: ignore[no-untyped-def]
     """Non-holder reached across a uniformly chosen boundary edge, then carried onward; -1 if none.
 
