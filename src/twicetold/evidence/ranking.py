@@ -13,6 +13,7 @@ import pandas as pd
 from twicetold.catalogue import Catalogue
 from twicetold.errors import TwicetoldError
 from twicetold.evidence import columns
+from twicetold.evidence.contacts import KnownContacts
 from twicetold.evidence.details import Details, motif_details
 from twicetold.evidence.results import Comparison, MotifEvidence, Ranking, RouteShares
 from twicetold.evidence.study import Study, prepare
@@ -66,6 +67,7 @@ def rank_catalogue(
     by: str = "evidence",
     cache: bool = True,
     details: bool = True,
+    contacts: KnownContacts | None = None,
 ) -> Ranking:
     """Test every motif of a catalogue and rank them.
 
@@ -82,6 +84,8 @@ def rank_catalogue(
         Whether banks of snapshots are kept on disk between runs.
     details : bool
         Whether everything the pages show is computed too (correlograms, bands, pairs ...).
+    contacts : KnownContacts, optional
+        Contact graphs known already; built from the coordinates by default.
 
     Raises
     ------
@@ -90,7 +94,7 @@ def rank_catalogue(
     """
     check_order(by)
     pool = pool or ThreadPool()
-    study = prepare(catalogue, plan or Plan())
+    study = prepare(catalogue, plan or Plan(), contacts=contacts)
     observed = observe_motifs(study)
     worlds = compute_worlds(study, observed, pool, cache=cache)
     table = judge(study, observed, worlds, tuple(range(catalogue.n_motifs)))

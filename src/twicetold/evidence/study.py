@@ -10,6 +10,7 @@ import numpy.typing as npt
 
 from twicetold.catalogue import Catalogue
 from twicetold.errors import PlanError
+from twicetold.evidence.contacts import KnownContacts
 from twicetold.graph import ContactGraph, contact_graph
 from twicetold.plan import Plan
 
@@ -128,7 +129,13 @@ def resolve(catalogue: Catalogue, plan: Plan) -> tuple[Plan, tuple[str, ...]]:
     return (plan.replace(**changes) if changes else plan), tuple(notes)
 
 
-def prepare(catalogue: Catalogue, plan: Plan, *, motifs: Sequence[int] | None = None) -> Study:
+def prepare(
+    catalogue: Catalogue,
+    plan: Plan,
+    *,
+    motifs: Sequence[int] | None = None,
+    contacts: KnownContacts | None = None,
+) -> Study:
     """Build the graph and one group for each surveyed set.
 
     Parameters
@@ -137,6 +144,8 @@ def prepare(catalogue: Catalogue, plan: Plan, *, motifs: Sequence[int] | None = 
     plan : Plan
     motifs : sequence of int, optional
         Only these motifs; all by default.
+    contacts : KnownContacts, optional
+        Contact graphs known already; built from the coordinates by default.
 
     Raises
     ------
@@ -144,13 +153,22 @@ def prepare(catalogue: Catalogue, plan: Plan, *, motifs: Sequence[int] | None = 
         When the plan does not fit the catalogue.
     """
     plan, notes = resolve(catalogue, plan)
-    graph = contact_graph(catalogue, plan.graph.rule, bridges=plan.graph.bridges)
+    if contacts is not None:
+        graph = contacts.whole
+    else:
+        graph = contact_graph(catalogue, plan.graph.rule, bridges=plan.graph.bridges)
     wanted = range(catalogue.n_motifs) if motifs is None else motifs
     members: dict[int, list[int]] = {}
     for motif in wanted:
         members.setdefault(int(catalogue.surveyed_of[motif]), []).append(int(motif))
     groups = tuple(
-        _group(catalogue, plan, graph, catalogue.surveyed_sets[s], members[s])
+        _group(
+            catalogue,
+            plan,
+            _graph_of(catalogue, plan, graph, catalogue.surveyed_sets[s], contacts),
+            catalogue.surveyed_sets[s],
+            members[s],
+        )
         for s in sorted(members)
     )
     return Study(
@@ -163,22 +181,33 @@ def prepare(catalogue: Catalogue, plan: Plan, *, motifs: Sequence[int] | None = 
     )
 
 
-def _group(
+def _graph_of(
     catalogue: Catalogue,
     plan: Plan,
     graph: ContactGraph,
+    mask: npt.NDArray[np.bool_],
+    contacts: KnownContacts | None,
+) -> ContactGraph:
+    """Contact graph among the traditions of a surveyed set."""
+    if contacts is not None:
+        return contacts.among(mask)
+    if mask.all():
+        return graph
+    return graph.restricted_to(
+        mask, catalogue.latitude, catalogue.longitude, bridges=plan.graph.bridges
+    )
+
+
+def _group(
+    catalogue: Catalogue,
+    plan: Plan,
+    own: ContactGraph,
     mask: npt.NDArray[np.bool_],
     motifs: list[int],
 ) -> Group:
     traditions = np.flatnonzero(mask).astype(np.int32)
     local = np.full(catalogue.n_traditions, -1, dtype=np.int32)
     local[traditions] = np.arange(len(traditions), dtype=np.int32)
-    if mask.all():
-        own = graph
-    else:
-        own = graph.restricted_to(
-            mask, catalogue.latitude, catalogue.longitude, bridges=plan.graph.bridges
-        )
     if plan.ancestry.level == "none":
         families = np.arange(len(traditions), dtype=np.int32)
     else:
