@@ -23,15 +23,19 @@ class WithoutOwnRecord:
     Parameters
     ----------
     attested : (M, N) scipy.sparse.csr_array of bool
+    exposure : (N,) float64
+        Motifs searched for in each tradition, relative to the most searched one: a total means
+        less where more was looked for.
     """
 
     attested: sp.csr_array
+    exposure: FloatArray
 
-    def __call__(self, motif: int) -> FloatArray:
-        """(N,) propensities for the motif with this catalogue index."""
+    def __call__(self, motif: int | None) -> FloatArray:
+        """(N,) propensities without the motif of this catalogue index (None: from them all)."""
         from twicetold.references.propensity import recorded_propensity
 
-        return recorded_propensity(self.attested, motif)
+        return recorded_propensity(self.attested, motif) / self.exposure
 
 
 @dataclass(frozen=True)
@@ -79,10 +83,20 @@ def group_propensity(study: Study, group: Group) -> GroupPropensity:
 
 def _recorded(study: Study, group: Group) -> GroupPropensity:
     """Row totals; for a motif, without its own record (or it would explain itself)."""
-    from twicetold.references.propensity import recorded_propensity
+    surveyed = _surveyed(study, group)
+    own = WithoutOwnRecord(
+        study.catalogue.attested[:, group.traditions], surveyed / max(surveyed.max(initial=1), 1)
+    )
+    return GroupPropensity(own(None), own)
 
-    own = WithoutOwnRecord(study.catalogue.attested[:, group.traditions])
-    return GroupPropensity(recorded_propensity(own.attested, None), own)
+
+def _surveyed(study: Study, group: Group) -> npt.NDArray[np.int64]:
+    """(N,) motifs searched for in each tradition of a group, at least the group's own."""
+    catalogue = study.catalogue
+    surveyed = np.zeros(group.n, dtype=np.int64)
+    for k, mask in enumerate(catalogue.surveyed_sets):
+        surveyed += mask[group.traditions] * int((catalogue.surveyed_of == k).sum())
+    return surveyed
 
 
 def _covariates(study: Study, group: Group) -> GroupPropensity:
@@ -93,11 +107,8 @@ def _covariates(study: Study, group: Group) -> GroupPropensity:
         {c: catalogue.covariates[c][group.traditions] for c in study.plan.emergence.covariates}
     )
     effort = None if catalogue.effort is None else catalogue.effort[group.traditions]
-    surveyed = np.zeros(group.n, dtype=np.int64)
-    for k, mask in enumerate(catalogue.surveyed_sets):
-        surveyed += mask[group.traditions] * int((catalogue.surveyed_of == k).sum())
     held = np.asarray(catalogue.attested[:, group.traditions].sum(axis=0)).ravel()
-    fit = covariate_propensity(held, frame, effort, surveyed)
+    fit = covariate_propensity(held, frame, effort, _surveyed(study, group))
     return GroupPropensity(
         fit.propensity,
         fits={"covariates": fit.summary()},
