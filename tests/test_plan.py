@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 import tomllib
 
 import pytest
@@ -9,7 +10,8 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from twicetold.errors import PlanError
-from twicetold.plan import Plan, plan_from_mapping, read_plan
+from twicetold.plan import Plan, plan_from_mapping, read_plan, recorded_order
+from twicetold.run import rules_of
 
 
 def test_the_written_plan_reads_back_equal(tmp_path):
@@ -98,3 +100,49 @@ def test_any_mapping_gives_a_plan_or_a_plan_error(raw):
     except PlanError:
         return
     assert plan_from_mapping(tomllib.loads(plan.to_toml())) == plan
+
+
+class TestRunRecord:
+    """A run.json stands for the plan it holds."""
+
+    def test_gives_its_plan_and_order(self, tmp_path):
+        plan = Plan().replace(graph__rule="gabriel", sensitivity__exponents=(0.0, 2.5))
+        file = tmp_path / "run.json"
+        file.write_text(json.dumps({"plan": plan.to_mapping(), "by": "moran_i", "seed": 1}))
+        assert read_plan(file) == plan
+        assert recorded_order(file) == "moran_i"
+
+    def test_a_plan_in_toml_records_no_order(self, tmp_path):
+        file = tmp_path / "plan.toml"
+        file.write_text(Plan().to_toml())
+        assert recorded_order(file) is None
+
+    @pytest.mark.parametrize(
+        ("text", "words"),
+        [
+            ("{", "not valid JSON"),
+            ("{}", 'must hold a "plan"'),
+            ('{"plan": 3}', 'must hold a "plan"'),
+            ("[1]", "not valid TOML|unknown|Unknown"),
+            ('{"plan": {"evidence": {"drwas": 3}}}', "Did you mean 'draws'"),
+            ('{"plan": {"evidence": {"alpha": NaN}}}', "a number"),
+            ('{"plan": {"evidence": {"draws": null}}}', "whole number"),
+            ("{" * 100_000, "not valid JSON"),
+            ('{"plan":' * 100_000, "not valid JSON"),
+        ],
+    )
+    def test_a_broken_record_is_refused(self, tmp_path, text, words):
+        file = tmp_path / "run.json"
+        file.write_text(text)
+        with pytest.raises(PlanError, match=words) as err:
+            read_plan(file)
+        assert "run.json" in str(err.value)
+
+
+def test_columns_that_play_a_part_are_named_and_not_empty():
+    rules = rules_of(Plan().replace(catalogue__family="stock", catalogue__region="island"))
+    assert (rules.family, rules.region) == ("stock", "island")
+    assert (rules.effort, rules.branch) == ("", "")
+    for part in ("effort", "family", "branch", "region"):
+        with pytest.raises(PlanError, match=rf"catalogue\.{part}` must name a column"):
+            Plan().replace(**{f"catalogue__{part}": " "})

@@ -157,9 +157,9 @@ def rank(
     out: Annotated[Path, typer.Option("--out", help="Folder for the run; must not exist.")],
     plan: PlanOpt = None,
     by: Annotated[
-        str,
+        str | None,
         typer.Option("--by", help="evidence, moran_i, joins_ratio, emergence_share or holders."),
-    ] = "evidence",
+    ] = None,
     graph: GraphOpt = None,
     propensity: PropensityOpt = None,
     draws: DrawsOpt = None,
@@ -180,8 +180,11 @@ def rank(
     no_cache: NoCacheOpt = False,
 ) -> None:
     """Rank the whole catalogue and write its tables and pages."""
+    from twicetold.plan import recorded_order
     from twicetold.run import rank_run
 
+    # A run's record repeats the run, its order included.
+    order = by or (recorded_order(plan) if plan else None) or "evidence"
     wanted = _plan(plan, graph, propensity, draws, walks, seed, worlds)
     if stability:
         wanted = wanted.replace(sensitivity__stability=True)
@@ -190,7 +193,7 @@ def rank(
             catalogue,
             out,
             wanted,
-            by=by,
+            by=order,
             without=tuple(without or ()),
             pool=pool,
             force=force,

@@ -28,6 +28,7 @@ from twicetold.errors import PlanError
 WORLDS = ("emergence", "ancestry", "contact", "transmission", "shares")
 PROPENSITIES = ("equal", "effort", "recorded", "covariates", "margins")
 LEVELS = ("family", "branch", "none")
+COLUMNS = ("effort", "family", "branch", "region")
 GRAPH_RULES = ("nearest:K", "within:KM", "delaunay", "gabriel", "given", "given:FILE")
 
 
@@ -50,7 +51,10 @@ class CatalogueSection:
     absent_rows: str = _say(
         'What no row means: "searched" (searched and absent) or "not searched".', "searched"
     )
-    effort: str = _say("Name of the traditions' effort column.", "effort")
+    effort: str = _say("Name of the traditions' column of effort.", "effort")
+    family: str = _say("Name of the traditions' column of families.", "family")
+    branch: str = _say("Name of the traditions' column of branches.", "branch")
+    region: str = _say("Name of the traditions' column of regions.", "region")
     restricted: bool = _say(
         "Whether rows marked restricted enter; they then appear only in totals.", False
     )
@@ -61,6 +65,9 @@ class CatalogueSection:
         one_of("catalogue.absent_rows", self.absent_rows, ("searched", "not searched"))
         if isinstance(self.presence, str):
             one_of("catalogue.presence", self.presence, ("any",), " or a table")
+        for part in COLUMNS:
+            if not getattr(self, part).strip():
+                raise PlanError(f"`catalogue.{part}` must name a column, got an empty text.")
 
 
 @dataclass(frozen=True)
@@ -297,32 +304,70 @@ class Plan:
 
 
 def read_plan(path: str | Path) -> Plan:
-    """Read a plan from TOML; keys left out take their defaults.
+    """Read a plan from TOML, or from the ``run.json`` of an earlier run.
+
+    Keys left out take their defaults.
 
     Raises
     ------
     PlanError
-        When the file cannot be read, is not TOML, holds an unknown key or an unusable value.
+        When the file cannot be read, is neither TOML nor a run's record, holds an unknown key or
+        an unusable value.
     """
     path = Path(path)
+    text = _plan_text(path)
+    try:
+        if text.lstrip().startswith("{"):  # no TOML starts so
+            return plan_from_mapping(_run_record(text)["plan"])
+        return plan_from_mapping(tomllib.loads(text))
+    except PlanError as err:
+        raise PlanError(f"{path.name}: {err}") from err
+    except (ValueError, RecursionError) as err:
+        raise PlanError(f"{path.name}: not valid TOML: {err}. See `twicetold plan`.") from err
+
+
+def recorded_order(path: str | Path) -> str | None:
+    """Give the order (``--by``) that a ``run.json`` records; None for a plan in TOML.
+
+    Raises
+    ------
+    PlanError
+        As :func:`read_plan`.
+    """
+    path = Path(path)
+    text = _plan_text(path)
+    if not text.lstrip().startswith("{"):
+        return None
+    try:
+        order = _run_record(text).get("by")
+    except PlanError as err:
+        raise PlanError(f"{path.name}: {err}") from err
+    return order if isinstance(order, str) else None
+
+
+def _run_record(text: str) -> dict[str, Any]:
+    try:
+        record = json.loads(text)
+    except (ValueError, RecursionError) as err:
+        raise PlanError(f"not valid JSON: {err}. Give a plan, or a run.json as written.") from err
+    if not isinstance(record, dict) or not isinstance(record.get("plan"), dict):
+        raise PlanError(
+            'must hold a "plan", as run.json does. Give a plan, or an untouched record.'
+        )
+    return record
+
+
+def _plan_text(path: Path) -> str:
     try:
         if path.stat().st_size > 1_000_000:
             raise PlanError(f"{path.name}: a plan is a small TOML file; this one is over 1 MB.")
-        text = path.read_bytes().decode("utf-8-sig")
+        return path.read_bytes().decode("utf-8-sig")
     except OSError as err:
         raise PlanError(f"{path}: the plan cannot be read ({err.strerror}).") from err
     except UnicodeDecodeError as err:
         raise PlanError(
             f"{path.name}: a plan must be UTF-8 text; byte {err.start} is not. Save it as UTF-8."
         ) from err
-    try:
-        raw = tomllib.loads(text)
-    except (tomllib.TOMLDecodeError, RecursionError, ValueError) as err:
-        raise PlanError(f"{path.name}: not valid TOML: {err}. See `twicetold plan`.") from err
-    try:
-        return plan_from_mapping(raw)
-    except PlanError as err:
-        raise PlanError(f"{path.name}: {err}") from err
 
 
 def plan_from_mapping(raw: Mapping[str, Any], base: Plan | None = None) -> Plan:

@@ -14,7 +14,7 @@ from typing import TYPE_CHECKING, Any
 
 from twicetold import __version__
 from twicetold.folders import check_new_folder, new_folder, write_text
-from twicetold.plan import Plan
+from twicetold.plan import COLUMNS, Plan
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -55,7 +55,8 @@ def rules_of(plan: Plan) -> CatalogueRules:
         absent_rows=part.absent_rows,  # type: ignore[arg-type]
         restricted=part.restricted,
         without=part.without,
-        effort="" if part.effort == "effort" else part.effort,
+        # A column of the part's own name is found without being asked for, and may be missing.
+        **{name: "" if (column := getattr(part, name)) == name else column for name in COLUMNS},
     )
 
 
