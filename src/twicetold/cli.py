@@ -8,14 +8,35 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Annotated, Any
 
 import typer
+from typer.core import TyperGroup
 
 from twicetold.errors import CatalogueError, TwicetoldError
 
 if TYPE_CHECKING:
     from twicetold.plan import Plan
 
+
+class _Carried(BaseException):
+    """Carries an interrupt or a fault of the system past typer, which would end on it silently."""
+
+    def __init__(self, original: KeyboardInterrupt | OSError) -> None:
+        self.original = original
+
+
+class _Commands(TyperGroup):
+    """The commands, all interrupts and faults of the system left to :func:`main`."""
+
+    def invoke(self, ctx: Any) -> Any:
+        """Run the command."""
+        try:
+            return super().invoke(ctx)
+        except (KeyboardInterrupt, OSError) as err:
+            raise _Carried(err) from err
+
+
 app = typer.Typer(
     name="twicetold",
+    cls=_Commands,
     help="Was the tale carried, or told twice? Tests every motif of a catalogue.",
     no_args_is_help=True,
     add_completion=False,
@@ -235,13 +256,23 @@ def supplement(
     run: Annotated[Path, typer.Argument(help="Folder that rank wrote.")],
     out: Annotated[Path, typer.Option("--out", help="Folder for the deposit; must not exist.")],
     cldf: Annotated[bool, typer.Option("--cldf", help="Also a CLDF dataset of results.")] = False,
+    rounded: Annotated[
+        bool,
+        typer.Option(
+            "--rounded/--no-rounded",
+            help="Rank again on the rounded coordinates and say which verdicts move.",
+        ),
+    ] = True,
+    workers: WorkersOpt = None,
+    cluster: ClusterOpt = None,
     quiet: QuietOpt = False,
     force: ForceOpt = False,
 ) -> None:
     """Write the journal tables of a run."""
     from twicetold.run import supplement_run
 
-    said = supplement_run(run, out, cldf=cldf, force=force)
+    with _pool(workers, cluster, quiet) as pool:
+        said = supplement_run(run, out, cldf=cldf, force=force, pool=pool, rounded=rounded)
     if not quiet:
         typer.echo(said)
 
@@ -297,10 +328,17 @@ def _pool(workers: int | None, cluster: str | None, quiet: bool) -> Any:
     return open_pool(workers=workers, cluster=cluster, quiet=quiet)
 
 
+def _run() -> None:
+    try:
+        app()
+    except _Carried as carried:
+        raise carried.original from None
+
+
 def main() -> None:
     """Run the command line; every error a user can meet is one plain message."""
     try:
-        app()
+        _run()
     except CatalogueError as err:
         noun = "problem" if len(err.problems) == 1 else "problems"
         print(f"twicetold: {len(err.problems)} {noun} in the catalogue:", file=sys.stderr)

@@ -21,6 +21,7 @@ if TYPE_CHECKING:
 
     from twicetold.catalogue import CatalogueRules
     from twicetold.evidence import MotifEvidence, Ranking
+    from twicetold.report.supplement import Run
     from twicetold.workers import Pool
 
 __all__ = [
@@ -197,11 +198,29 @@ def _write_run(ranking: Ranking, folder: Path, *, path: Path, by: str, moved: An
     """Fill a run's folder: table, plan, record, the catalogue as used, tables, pages."""
     from twicetold.catalogue import write_catalogue
     from twicetold.report import write_pages
+    from twicetold.report.supplement import keep_figures
 
     write_csv(ranking.motifs, folder / "motifs.csv")
     write_text(folder / "plan.toml", ranking.plan.to_toml())
     write_text(folder / "run.json", _json(run_record(ranking, by=by)))
     write_catalogue(ranking.catalogue, folder / "catalogue")
+    tables = run_tables(ranking)
+    if moved is not None:
+        tables["moved"] = moved
+    if tables:
+        (folder / "tables").mkdir()
+    for name, frame in tables.items():
+        write_csv(frame, folder / "tables" / f"{name}.csv")
+    write_csv(contacts_frame(ranking), folder / "contacts.csv")
+    keep_figures(ranking, folder / "figures")
+    command = f"twicetold rank {_quoted(path.name)} --plan plan.toml --out RUN"
+    if by != "evidence":
+        command += f" --by {by}"
+    write_pages(ranking, folder, command={"rank": command, "catalogue": path.name})
+
+
+def run_tables(ranking: Ranking) -> dict[str, pd.DataFrame]:
+    """Give every table of a run but that of the motifs, by name."""
     tables = dict(ranking.tables)
     for name in ("bands", "prevalence", "categories"):
         frame = getattr(ranking, name)
@@ -216,17 +235,7 @@ def _write_run(ranking: Ranking, folder: Path, *, path: Path, by: str, moved: An
         together = pd.concat(stability, ignore_index=True)
         first = ["motif_id", *[c for c in together.columns if c != "motif_id"]]
         tables["stability"] = together[first]
-    if moved is not None:
-        tables["moved"] = moved
-    if tables:
-        (folder / "tables").mkdir()
-    for name, frame in tables.items():
-        write_csv(frame, folder / "tables" / f"{name}.csv")
-    write_csv(contacts_frame(ranking), folder / "contacts.csv")
-    command = f"twicetold rank {_quoted(path.name)} --plan plan.toml --out RUN"
-    if by != "evidence":
-        command += f" --by {by}"
-    write_pages(ranking, folder, command={"rank": command, "catalogue": path.name})
+    return tables
 
 
 def contacts_frame(ranking: Ranking) -> pd.DataFrame:
@@ -329,14 +338,36 @@ def power_run(
     return tell_power(table)
 
 
-def supplement_run(run: Path, out: Path, *, cldf: bool, force: bool) -> str:
-    """Write the deposit of a run."""
-    from twicetold.report.supplement import write_supplement
+def supplement_run(
+    run: Path, out: Path, *, cldf: bool, force: bool, pool: Pool, rounded: bool = True
+) -> str:
+    """Write the deposit of a run, and say whether verdicts move on the rounded coordinates."""
+    from twicetold.report.supplement import read_run, write_supplement
 
     check_new_folder(out, force=force)
+    moved = None
+    if rounded:
+        moved = rounded_again(read_run(run), pool)
     with new_folder(out, force=force) as part:
-        names = write_supplement(run, part, cldf=cldf)
-    return f"Wrote {len(names)} files to {out}. Next: twicetold verify {out}"
+        names = write_supplement(run, part, cldf=cldf, rounded=moved)
+    lines = [f"Wrote {len(names)} files to {out}."]
+    if moved is not None:
+        others = int((moved["moved"] == "yes").sum())
+        noun = "verdict moves" if others == 1 else "verdicts move"
+        lines.append(f"On the rounded coordinates {others:,} {noun} (S4_rounded.csv).")
+    return "\n".join([*lines, f"Next: twicetold verify {_quoted(str(out))}"])
+
+
+def rounded_again(run: Run, pool: Pool) -> pd.DataFrame | None:
+    """Rank a run's catalogue again on rounded coordinates; None where they are not rounded."""
+    import pandas as pd
+
+    from twicetold.evidence.rounded import rerun_rounded
+
+    if run.plan.report.round_degrees <= 0:
+        return None
+    before = pd.DataFrame(run.motifs[1], columns=list(run.motifs[0]))
+    return rerun_rounded(run.catalogue, run.plan, before, pool=pool)
 
 
 def verify_run(deposit: Path, *, pool: Pool) -> tuple[bool, list[str]]:

@@ -1,0 +1,120 @@
+"""What every column of a deposit means."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+
+from twicetold.evidence import columns as motif_columns
+from twicetold.report.supplement.table import Column, kind_of
+
+_SHARED = (
+    Column("motif_id", "string", "Motif id, as in the catalogue."),
+    Column("name", "string", "Name, as in the catalogue."),
+    Column("tradition_id", "string", "Tradition id, as in the catalogue."),
+    Column("category", "string", "Motif category, as in the catalogue."),
+    Column("holders", "integer", "Number of traditions in which a motif is attested."),
+    Column("motifs", "integer", "Number of motifs."),
+    Column("verdict", "string", "What the pre-declared table of the plan says."),
+    Column("probability", "number", "Probability, 0 to 1."),
+    Column("world", "string", "World the motifs are compared with."),
+    Column("low", "number", "Lower end of the interval or band."),
+    Column("median", "number", "Median."),
+    Column("high", "number", "Upper end of the interval or band."),
+    Column("fitted", "number", "Value fitted."),
+    Column("kind", "string", "What was changed in the sensitivity run."),
+    Column("setting", "string", "To what it was changed."),
+    Column("truth", "string", "Route by which simulated motifs spread."),
+    Column("testable", "integer", "Motifs that could be rejected at all."),
+    Column("rejected_share", "number", "Share of testable motifs that reject emergence alone."),
+    Column("rejected_low", "number", "Lower end of the interval of rejected_share."),
+    Column("rejected_high", "number", "Upper end of the interval of rejected_share."),
+    Column("joins_ratio_low", "number", "Lower end of the interval of joins_ratio."),
+    Column("joins_ratio_high", "number", "Upper end of the interval of joins_ratio."),
+    Column("moved", "string", "Whether the verdict is another: yes or no."),
+)
+
+_BY_TABLE: dict[str, tuple[Column, ...]] = {
+    "S2_traditions": (
+        Column("name", "string", "Tradition name, as in the catalogue."),
+        Column("latitude", "number", "Degrees north, rounded as the plan says."),
+        Column("longitude", "number", "Degrees east, rounded as the plan says."),
+        Column("family", "string", "Language family; blank where none is named."),
+        Column("branch", "string", "Branch within the family; blank where none is named."),
+        Column("region", "string", "Region; blank where none is named."),
+        Column("effort", "number", "How much was collected, relative; as in the catalogue."),
+        Column("motifs_held", "integer", "Listed motifs attested in the tradition."),
+        Column("neighbours", "integer", "Listed traditions next to it in the contact graph."),
+        Column("located", "string", "yes, or no: without coordinates it was left out."),
+        Column("label", "string", "Labels and notices the community made, word for word."),
+    ),
+    "S3_contacts": (
+        Column("tradition_id", "string", "One end of the contact edge."),
+        Column("neighbour_id", "string", "The other end."),
+        Column(
+            "length_km", "number", "Great-circle kilometres between the coordinates of table S2."
+        ),
+        Column("bridge", "string", "yes: added only so that every tradition can be reached."),
+    ),
+    "S3_bridges": (
+        Column(
+            "motif_id",
+            "string",
+            "First motif (by id) of those searched in one and the same part of the traditions.",
+        ),
+        Column("tradition_id", "string", "One end of a bridge among the traditions searched."),
+        Column("neighbour_id", "string", "The other end."),
+    ),
+    "S5_plan": (
+        Column("choice", "string", "Section and key of the analysis plan."),
+        Column("value", "string", "What was chosen, as in plan.toml."),
+        Column("meaning", "string", "What the choice decides."),
+    ),
+    "S5_provenance": (
+        Column("item", "string", "What is recorded."),
+        Column("value", "string", "Its value."),
+    ),
+    "columns": (
+        Column("table", "string", "Table of the deposit."),
+        Column("column", "string", "Column of the table."),
+        Column("kind", "string", "integer, number or string."),
+        Column("meaning", "string", "What the column holds."),
+    ),
+    "files": (
+        Column("file", "string", "File of the deposit."),
+        Column("bytes", "integer", "Its size."),
+        Column("sha256", "string", "Its SHA-256 digest, in hexadecimal."),
+    ),
+    "S4_prevalence": (
+        Column("motifs", "integer", "Motifs with this number of holders."),
+        Column("fitted", "number", "Motifs expected by the fitted prevalence curve."),
+    ),
+    "S4_bands": (
+        Column("low", "number", "Lower end of the 95 % band of the number of clusters."),
+        Column("median", "number", "Median number of clusters."),
+        Column("high", "number", "Upper end of the 95 % band of the number of clusters."),
+    ),
+}
+
+
+def describe(table: str, name: str, cells: Iterable[str]) -> Column:
+    """Give the description of a column; its kind is taken from the cells where nothing is known."""
+    cells = list(cells)
+    for column in (*_BY_TABLE.get(table, ()), *motif_columns.COLUMNS, *_SHARED):
+        if column.name == name:
+            return _fitting(Column(name, column.kind, column.meaning), cells)
+    for suffix, words in (("_rounded", "on rounded coordinates"), ("_with", "with everybody in")):
+        if name.endswith(suffix):
+            plain = describe(table, name.removesuffix(suffix), cells)
+            return Column(name, plain.kind, f"{plain.meaning.rstrip('.')}; {words}.")
+    said = name.replace("_", " ")
+    if table == "S2_traditions":
+        said = f"the catalogue's own column {name}"
+    return Column(name, kind_of(cells), said[:1].upper() + said[1:] + ".")
+
+
+def _fitting(column: Column, cells: list[str]) -> Column:
+    """Never call a column numeric when a cell of it is not: a spreadsheet would be told a lie."""
+    if column.kind != "string" and (found := kind_of(cells)) != column.kind and any(cells):
+        kind = "number" if found in ("integer", "number") and column.kind == "number" else found
+        return Column(column.name, kind, column.meaning)
+    return column
