@@ -12,6 +12,8 @@ import numpy as np
 import numpy.typing as npt
 import scipy.sparse as sp
 
+from twicetold.catalogue.notes import near as nearest
+from twicetold.catalogue.notes import shown
 from twicetold.errors import Problem, UnknownMotifError
 
 FloatArray = npt.NDArray[np.float64]
@@ -243,6 +245,7 @@ class Catalogue:
             for i, n in zip(self.motif_ids, self.motif_names, strict=True)
             if wanted and (wanted in n.casefold() or wanted in i.casefold())
         ][:5]
+        near = near or [shown(x) for x in nearest(words, (*self.motif_ids, *self.motif_names))]
         hint = f" Did you mean: {'; '.join(near)}?" if near else " Motif ids are case-sensitive."
         raise UnknownMotifError(f"No motif has the id or name {words!r}.{hint}")
 
