@@ -1,0 +1,77 @@
+"""The layer rule: each folder imports only folders before it, and says so where it starts."""
+
+from __future__ import annotations
+
+import ast
+from pathlib import Path
+
+import pytest
+
+import twicetold
+
+HOME = Path(twicetold.__file__).parent
+LAYERS = ("catalogue", "graph", "statistics", "references", "spread", "evidence", "report")
+# Single modules that every layer may use: they import nothing of the layers themselves.
+PLAIN = {"errors", "randomness", "workers", "folders", "_sfc64"}
+# The plan takes the reading rules from the catalogue; the layers below inference never see it.
+PLAN = {"plan": ("evidence", "report")}
+# Nothing of the commands is imported by any layer.
+COMMANDS = {"cli", "run", "verify", "progress", "cluster", "example"}
+
+
+def imported(path: Path) -> set[str]:
+    """Parts of twicetold that a module imports anywhere, in functions and for types too."""
+    return {name.split(".")[1] for name in imported_modules(path)}
+
+
+def imported_modules(path: Path) -> set[str]:
+    names = set()
+    for node in ast.walk(ast.parse(path.read_text(encoding="utf-8"))):
+        if isinstance(node, ast.ImportFrom):
+            assert node.level == 0, f"{path}: relative import"
+            module = node.module or ""
+            names |= (
+                {f"{module}.{a.name}" for a in node.names} if module == "twicetold" else {module}
+            )
+        elif isinstance(node, ast.Import):
+            names |= {a.name for a in node.names}
+    return {n for n in names if n.startswith("twicetold.")}
+
+
+def test_every_part_has_its_place():
+    parts = {p.stem for p in HOME.glob("*.py")} | {
+        p.parent.name for p in HOME.glob("*/__init__.py")
+    }
+    assert parts - {"__init__", "_plan_values"} == {*LAYERS, *PLAIN, *PLAN, *COMMANDS}
+
+
+@pytest.mark.parametrize("layer", LAYERS)
+def test_imports_go_only_down_the_list(layer):
+    allowed = {*LAYERS[: LAYERS.index(layer) + 1], *PLAIN, "__version__"}
+    allowed |= {name for name, users in PLAN.items() if layer in users}
+    wrong = {
+        f"{path.relative_to(HOME)} imports {name}"
+        for path in (HOME / layer).rglob("*.py")
+        for name in imported(path) - allowed
+    }
+    assert not wrong
+
+
+def test_plain_modules_and_the_example_import_no_layer():
+    for path in [*(HOME / f"{name}.py" for name in PLAIN), *(HOME / "example").glob("*.py")]:
+        assert imported(path) <= {*PLAIN, "example"}, path
+    assert imported(HOME / "plan.py") <= {"errors", "_plan_values", "catalogue"}
+
+
+@pytest.mark.parametrize("layer", [*LAYERS, "example"])
+def test_each_folder_states_its_layer(layer):
+    said = ast.get_docstring(ast.parse((HOME / layer / "__init__.py").read_text(encoding="utf-8")))
+    assert "Layer rule:" in said
+
+
+def test_the_report_computes_no_statistic():
+    # Of the worlds it knows only the shape of a finished law.
+    below = ("twicetold.statistics", "twicetold.references", "twicetold.spread")
+    for path in (HOME / "report").rglob("*.py"):
+        used = {m for m in imported_modules(path) if m.startswith(below)}
+        assert used <= {"twicetold.references.law"}, path
