@@ -23,7 +23,12 @@ from twicetold.plan import Plan, read_plan
 from twicetold.report.supplement import frame_rows, read_run
 from twicetold.report.supplement.source import Rows, Run, contacts_graph
 from twicetold.report.supplement.table import Table, csv_text, read_rows
-from twicetold.report.supplement.tables import contacts_table, plan_table, traditions_table
+from twicetold.report.supplement.tables import (
+    contacts_table,
+    plan_table,
+    traditions_table,
+    with_infinity,
+)
 from twicetold.run import contacts_frame, run_tables
 from twicetold.workers import Pool
 
@@ -135,6 +140,7 @@ class _Compared:
     def table(self, name: str, given: Rows, computed: Rows, *, skip: Sequence[str] = ()) -> None:
         """Compare two tables cell by cell, as text."""
         header, rows = given
+        computed = (computed[0], list(with_infinity(computed[1])))
         wanted = [c for c in computed[0] if c not in skip]
         if [c for c in header if c not in skip] != wanted:
             self._differ(f"{name}: columns {', '.join(header)}; computed {', '.join(computed[0])}")
@@ -289,6 +295,10 @@ def _without_distances(plan: Plan) -> Plan:
     return plan.replace(sensitivity__stability=False, sensitivity__hidden=False)
 
 
+def _infinite(rows: Rows) -> Rows:
+    return rows[0], list(with_infinity(rows[1]))
+
+
 def _rows(table: Table) -> Rows:
     return table.header, list(table.rows)
 
@@ -308,7 +318,7 @@ def _verify_run(run: Run, pool: Pool) -> tuple[bool, list[str]]:
         cache=False,
         contacts=contacts,
     )
-    out.table("motifs", run.motifs, frame_rows(ranking.motifs))
+    out.table("motifs", _infinite(run.motifs), frame_rows(ranking.motifs))
     given = read_rows(run.folder / "contacts.csv")
     out.table("contacts", given, frame_rows(contacts_frame(ranking)))
     computed = run_tables(ranking)
@@ -316,7 +326,7 @@ def _verify_run(run: Run, pool: Pool) -> tuple[bool, list[str]]:
         if f"S4_{name}" in WITHDRAWN_TABLES:
             out.said.append(f"Not compared: {name}, since the withdrawn records are not there.")
         elif name in computed:
-            out.table(name, rows, frame_rows(computed[name]))
+            out.table(name, _infinite(rows), frame_rows(computed[name]))
         else:
             out.differences.append(f"Differs: {name}: nothing of that name was computed.")
     agrees = not out.differences

@@ -88,6 +88,22 @@ _BY_TABLE: dict[str, tuple[Column, ...]] = {
         Column("motifs", "integer", "Motifs with this number of holders."),
         Column("fitted", "number", "Motifs expected by the fitted prevalence curve."),
     ),
+    "S4_hidden": (
+        Column("length_km", "number", "Correlation length of the hidden propensity, kilometres."),
+        Column("log_sd", "number", "Its standard deviation (natural log) that would suffice."),
+        Column("log_sd_low", "number", "Lower end of the interval of log_sd."),
+        Column("log_sd_high", "number", "Upper end of the interval of log_sd."),
+        Column("ratio", "number", "The same as a ratio of the highest to the lowest propensity."),
+    ),
+    "S4_hidden_lengths": (
+        Column("length_km", "number", "Correlation length of the hidden propensity, kilometres."),
+        Column("motifs", "integer", "Motifs it was computed for."),
+        Column("log_sd_quarter", "number", "Lower quartile of log_sd over these motifs."),
+        Column("log_sd_median", "number", "Median of log_sd over these motifs."),
+        Column("log_sd_three_quarters", "number", "Upper quartile of log_sd over these motifs."),
+        Column("ratio_median", "number", "Median of ratio over these motifs."),
+        Column("beyond", "integer", "Motifs for which no strength tried would suffice."),
+    ),
     "S4_bands": (
         Column("low", "number", "Lower end of the 95 % band of the number of clusters."),
         Column("median", "number", "Median number of clusters."),

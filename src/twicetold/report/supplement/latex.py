@@ -8,6 +8,7 @@ pdfLaTeX shows the code points. The CSV tables hold every text as it is.
 from __future__ import annotations
 
 import math
+import re
 import unicodedata
 from collections.abc import Sequence
 from dataclasses import dataclass
@@ -35,6 +36,7 @@ PREAMBLE = r"""\documentclass[a4paper]{article}
 \usepackage{array,booktabs,longtable}
 \setlength{\tabcolsep}{3pt}
 \setlength{\LTcapwidth}{\linewidth}
+\setlength{\LTleft}{0pt}
 \setlength{\parindent}{0pt}
 \emergencystretch=2em
 """
@@ -54,8 +56,9 @@ def fragment(table: Table) -> str:
     cells = [
         [_shown(text, c) for text, c in zip(row, table.columns, strict=True)] for row in table.rows
     ]
-    widths = [_width(c, [row[k] for row in cells]) for k, c in enumerate(table.columns)]
-    panels = _panels(table, widths)
+    columns = [[row[k] for row in cells] for k in range(len(table.columns))]
+    natural = [_width(c, col) for c, col in zip(table.columns, columns, strict=True)]
+    panels = _panels(table, natural)
     head = (
         f"% {table.name}: needs array, booktabs, longtable and \\otherscript; see supplement.tex\n"
     )
@@ -74,10 +77,10 @@ class _Panel:
     widths: tuple[float, ...]
 
 
-def _panels(table: Table, widths: list[float]) -> list[_Panel]:
+def _panels(table: Table, natural: list[float]) -> list[_Panel]:
     """Fill lines with columns from the left; every panel begins with the names of the rows."""
     names = [k for k, c in enumerate(table.columns) if c.name in table.key[:2]] or [0]
-    base = sum(widths[k] + GAP for k in names)
+    widths = [min(w, WIDEST) for w in natural]
     panels: list[list[int]] = []
     used = math.inf
     for k in range(len(table.columns)):
@@ -85,12 +88,18 @@ def _panels(table: Table, widths: list[float]) -> list[_Panel]:
             continue
         if used + widths[k] + GAP > LINE:
             panels.append(list(names))
-            used = base
+            used = sum(widths[j] + GAP for j in names)
         panels[-1].append(k)
         used += widths[k] + GAP
-    if not panels:
-        panels = [list(names)]
-    return [_Panel(tuple(p), tuple(widths[k] for k in p)) for p in panels]
+    return [_spread(p, widths, natural) for p in panels or [names]]
+
+
+def _spread(columns: list[int], widths: list[float], natural: list[float]) -> _Panel:
+    """Give what is left of the line to columns that could do with more."""
+    spare = max(LINE - sum(widths[k] + GAP for k in columns), 0.0)
+    wanted = {k: natural[k] - widths[k] for k in columns}
+    share = min(1.0, spare / total) if (total := sum(wanted.values())) > 0 else 0.0
+    return _Panel(tuple(columns), tuple(widths[k] + share * wanted[k] for k in columns))
 
 
 def _longtable(table: Table, panel: _Panel, cells: list[list[str]], part: str) -> str:
@@ -101,20 +110,17 @@ def _longtable(table: Table, panel: _Panel, cells: list[list[str]], part: str) -
         spec.append(
             rf">{{{side}\arraybackslash}}p{{\dimexpr {share:.4f}\linewidth-2\tabcolsep\relax}}"
         )
-    heads = [
-        _pieces(table.columns[k].name, w) for k, w in zip(panel.columns, panel.widths, strict=True)
-    ]
+    heads = [_head(table.columns[k].name) for k in panel.columns]
     caption = rf"\textbf{{{escaped(table.name)}}}{part}. {escaped(table.title)}"
-    across = rf"\multicolumn{{{len(panel.columns)}}}{{p{{0.98\linewidth}}}}"
     lines = [
         r"{\scriptsize",
         r"\begin{longtable}{" + "\n".join(spec) + "}",
-        f"{across}{{{caption}}}" + r"\\",
+        rf"\caption*{{{caption}}}\\",
         r"\toprule",
         " & ".join(heads) + r"\\",
         r"\midrule",
         r"\endfirsthead",
-        f"{across}{{{escaped(table.name)}{part}, continued}}" + r"\\",
+        rf"\caption*{{{escaped(table.name)}{part}, continued}}\\",
         r"\toprule",
         " & ".join(heads) + r"\\",
         r"\midrule",
@@ -135,6 +141,8 @@ def _shown(text: str, column: Column) -> str:
     """Numbers to four digits in LaTeX already; other text as it is."""
     if column.kind not in NUMERIC or text == "":
         return text
+    if text.endswith("INF"):
+        return r"$-\infty$" if text.startswith("-") else r"$\infty$"
     short = text
     if column.kind == "number":
         value = float(text)
@@ -148,13 +156,13 @@ def _shown(text: str, column: Column) -> str:
 
 
 def _width(column: Column, cells: list[str]) -> float:
-    """Width of a column in letters of the small type."""
-    head = max(_long(piece) for piece in column.name.split("_")) + 1.0
+    """Width a column would like, in letters of the small type."""
+    head = max(_long(piece) for piece in _parts(column.name)) + 1.0
     if column.kind in NUMERIC:
         bare = [c.replace(r"\times10^", "xx").strip("$").replace("{", "") for c in cells]
         return max(NARROWEST, head, *(len(c) + 0.5 for c in bare)) if bare else max(NARROWEST, head)
     whole = max((_long(c) for c in cells), default=0.0)
-    return min(max(whole, head, NARROWEST), WIDEST)
+    return max(whole, head, NARROWEST)
 
 
 def _long(text: str) -> float:
@@ -169,6 +177,15 @@ def _long(text: str) -> float:
         else 1.6
         for c in text
     )
+
+
+def _parts(name: str) -> list[str]:
+    """A column's name in the parts between which its line may break."""
+    return re.findall(r"[^_]*_+|[^_]+", name)
+
+
+def _head(name: str) -> str:
+    return r"\allowbreak{}".join(escaped(part) for part in _parts(name))
 
 
 def _pieces(text: str, width: float) -> str:

@@ -22,7 +22,7 @@ CAUTIONS = (
 )
 
 _OTHERS = (
-    ("supplement.xlsx", "the tables below in one workbook; no cell of it can run"),
+    ("supplement.xlsx", "the tables above in one workbook; no cell of it can run"),
     ("latex/supplement.tex", "the tables for LaTeX, one file each, with a document that sets all"),
     ("traditions.geojson", "the traditions as points (RFC 7946)"),
     ("contacts.geojson", "the contact graph as lines, cut at the antimeridian (RFC 7946)"),
@@ -94,7 +94,7 @@ def _coordinates(published: Published) -> str:
     if step <= 0:
         return "Coordinates are given as they were used."
     return (
-        f"Every published coordinate is rounded to {step:g} degrees: tables, maps, GeoJSON and the "
+        f"Every published coordinate is rounded ({step:g}°): tables, maps, GeoJSON and the "
         "catalogue in this deposit. The contact graph was built from the exact ones and is given "
         "as table S3, with lengths between the rounded ones (exact lengths would give the places "
         "away; the graph itself still says which places are near each other). Table S4_rounded, "

@@ -124,7 +124,12 @@ def read_rows(path: Path, *, guard: bool = False) -> tuple[tuple[str, ...], list
 
 def is_number(text: str) -> bool:
     """Whether a cell holds a plain number, as our own tables write them."""
-    return re.fullmatch(r"-?\d+(\.\d+)?([eE][+-]?\d+)?", text) is not None
+    return re.fullmatch(r"-?(\d+(\.\d+)?([eE][+-]?\d+)?|INF)", text) is not None
+
+
+def infinite(text: str) -> str:
+    """Infinity as table schemas write it; any other cell as it is."""
+    return text.upper() if text in ("inf", "-inf") else text
 
 
 def kind_of(cells: Iterable[str]) -> str:

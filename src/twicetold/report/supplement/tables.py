@@ -16,7 +16,7 @@ from twicetold.plan import Plan
 from twicetold.report.common import SMALLEST_TOTAL, open_traditions
 from twicetold.report.supplement.dictionary import describe
 from twicetold.report.supplement.source import Rows, Run
-from twicetold.report.supplement.table import Table
+from twicetold.report.supplement.table import Table, infinite, kind_of
 
 #: What stays of a motif whose totals would be too small beside restricted traditions.
 NAMED = ("rank", "motif_id", "name", "category")
@@ -25,6 +25,8 @@ TOO_FEW = f"fewer than {SMALLEST_TOTAL} holders: not listed, since restricted tr
 _TITLES = {
     "stability": "Verdict of every motif under other graphs, exponents, families and regions.",
     "rounded": "Verdict of every motif on exact and on rounded coordinates.",
+    "hidden": "How strong a hidden propensity would have to be, motif by motif.",
+    "hidden_lengths": "The same at other correlation lengths, over motifs.",
     "moved": "What moved when traditions were withdrawn.",
     "bands": "Number of clusters to expect for each number of holders, by world.",
     "prevalence": "Motifs by number of holders, with the fitted curve.",
@@ -105,10 +107,22 @@ def table(
     references: tuple[tuple[str, str, str], ...] = (),
 ) -> Table:
     """Make a table; the dictionary says what its columns are."""
-    body = tuple(tuple(row) for row in rows)
+    body = with_infinity(rows)
     cells = list(zip(*body, strict=True)) if body else [()] * len(header)
     columns = tuple(describe(name, h, c) for h, c in zip(header, cells, strict=True))
     return Table(name, title, columns, body, key, references)
+
+
+def with_infinity(rows: Iterable[Sequence[str]]) -> tuple[tuple[str, ...], ...]:
+    """Rows with infinite numbers written as table schemas want them, text left alone."""
+    body = [tuple(row) for row in rows]
+    marked = {k for row in body for k, cell in enumerate(row) if cell in ("inf", "-inf")}
+    numeric = {k for k in marked if kind_of(infinite(row[k]) for row in body) != "string"}
+    if not numeric:
+        return tuple(body)
+    return tuple(
+        tuple(infinite(c) if k in numeric else c for k, c in enumerate(row)) for row in body
+    )
 
 
 def motifs_table(published: Published) -> Table:

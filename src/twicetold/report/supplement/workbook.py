@@ -66,7 +66,7 @@ def _cell(sheet: Any, text: str, kind: str) -> Any:
 
     if text == "":
         return None
-    if kind in NUMERIC:
+    if kind in NUMERIC and not text.endswith("INF"):  # a workbook has no infinite numbers
         return int(text) if kind == "integer" else float(text)
     clean = _clean(text)
     cell = WriteOnlyCell(sheet, value="")
