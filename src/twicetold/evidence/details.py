@@ -10,6 +10,7 @@ import numpy as np
 import numpy.typing as npt
 import pandas as pd
 
+from twicetold.evidence.confounders import confounders
 from twicetold.evidence.study import Group, Study
 from twicetold.statistics import (
     DistanceClasses,
@@ -83,7 +84,16 @@ def motif_details(
                 "local_joins": local_joins(group.graph, held),
                 "correlogram": correlogram_frame(study, group, held, classes),
             }
-    return Details(parts=parts)
+    beside = confounders(study, observed, worlds, table, pool)
+    for motif, more in beside.parts.items():
+        parts[motif] |= more
+    return Details(
+        parts=parts,
+        columns=beside.columns,
+        categories=beside.categories,
+        tables=beside.tables,
+        notes=beside.notes,
+    )
 
 
 def group_classes(study: Study, group: Group) -> DistanceClasses | None:

@@ -10,7 +10,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable, Iterable, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 import numpy.typing as npt
@@ -37,6 +37,8 @@ DEFAULT_KM = 1500.0
 MOST_COLUMNS = 1500
 #: Up to this many traditions the whole covariance is factored.
 DENSE = 4000
+#: Fields are kept between strengths when they are at most this many numbers in all.
+KEPT = 20_000_000
 _LEFT = 1e-4
 _CLOCKS, _FIELDS = 0, 1
 
@@ -226,6 +228,14 @@ class _Setting:
     log_rate: FloatArray
     graph: tuple[IntArray, IntArray]
     wanted: tuple[IntArray, IntArray]
+    kept: tuple[FloatArray, ...] = ()
+
+    def draw(self, k: int) -> FloatArray:
+        """Fields of chunk k."""
+        if self.kept:
+            return self.kept[k]
+        size = min(CHUNK, self.search.draws - k * CHUNK)
+        return self.field.draw(self.search.seed, k, size)
 
 
 @dataclass
@@ -303,7 +313,8 @@ def hidden_bounds(
         (graph.indptr.astype(np.int64), graph.indices.astype(np.int64)),
         (first, np.ascontiguousarray(pairs[:, 1])),
     )
-    tails = _Tails(setting, pool or ThreadPool())
+    pool = pool or ThreadPool()
+    tails = _Tails(_with_fields(setting, pool), pool)
     draws = search.draws
     middle, low, high = (
         _crossing(tails, chance, search.alpha)
@@ -323,14 +334,26 @@ def hidden_bounds(
     )
 
 
+def _with_fields(setting: _Setting, pool: Pool) -> _Setting:
+    """Draw the fields once for all strengths, where they fit in memory."""
+    if setting.search.draws * len(setting.log_rate) > KEPT:
+        return setting
+    chunks = range(-(-setting.search.draws // CHUNK))
+    return replace(setting, kept=tuple(pool.run(_fields, setting, chunks, label="hidden fields")))
+
+
+def _fields(setting: _Setting, k: int) -> FloatArray:
+    return setting.draw(k)
+
+
 def _chunk(setting: _Setting, key: tuple[int, tuple[float, ...]]) -> IntArray:
     k, sigmas = key
-    size = min(CHUNK, setting.search.draws - k * CHUNK)
+    fields = setting.draw(k)
     tails = np.zeros((len(sigmas), len(setting.wanted[1])), dtype=np.int64)
     kernels.count_tails(
-        chunk_words(setting.search.seed, Stream.HIDDEN, _CLOCKS, k, draws=size),
+        chunk_words(setting.search.seed, Stream.HIDDEN, _CLOCKS, k, draws=len(fields)),
         setting.log_rate,
-        setting.field.draw(setting.search.seed, k, size),
+        fields,
         np.array(sigmas),
         setting.graph,
         setting.wanted,
