@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import json
 import os
 
 import pytest
@@ -65,8 +64,7 @@ def test_two_runs_into_one_folder(tmp_path):
 
 def test_the_lock_of_a_killed_run_is_no_obstacle(tmp_path):
     out = tmp_path / "RUN"
-    gone = 2**22 - 3  # above the usual highest process number
-    (tmp_path / ".RUN.lock").write_text(json.dumps({"pid": gone, "time": 2e9}))
+    (tmp_path / ".RUN.lock").write_text("")
     (tmp_path / ".RUN.part-1-x").mkdir()
     with new_folder(out) as part:
         (part / "run.json").write_text("{}")
@@ -77,9 +75,14 @@ def test_a_run_killed_between_the_two_renames_is_put_back(tmp_path):
     out = tmp_path / "RUN"
     (tmp_path / ".RUN.old-1").mkdir()
     (tmp_path / ".RUN.old-1" / "run.json").write_text("old")
-    with pytest.raises(RuntimeError), new_folder(out):
-        raise RuntimeError
+    # It is an earlier run again: not to be replaced by one that was not told to.
+    with pytest.raises(TwicetoldError, match="--force"), new_folder(out):
+        pass
     assert (out / "run.json").read_text() == "old"
+    with new_folder(out, force=True) as part:
+        (part / "run.json").write_text("new")
+    assert (out / "run.json").read_text() == "new"
+    assert sorted(os.listdir(tmp_path)) == ["RUN"]
 
 
 def test_text_is_written_whole_and_not_over_another(tmp_path):

@@ -2,21 +2,19 @@
 
 from __future__ import annotations
 
-import json
 import os
 import shutil
-import time
+import sys
 import uuid
 from collections.abc import Iterator
 from contextlib import contextmanager, suppress
+from dataclasses import dataclass
 from pathlib import Path
 
 from twicetold.errors import TwicetoldError
 
 #: A folder of ours says so with one of these; only such a folder (or an empty one) is replaced.
 MARKS = ("run.json", "datapackage.json", "about.toml", "power.csv", "test.json")
-#: A lock older than this (seconds), or of a process that is gone, is left over from a kill.
-STALE_LOCK = 7 * 24 * 3600
 
 
 def write_text(path: Path, text: str, *, force: bool = False) -> None:
@@ -63,6 +61,10 @@ def check_new_folder(out: Path, *, force: bool) -> None:
                 f"{out} holds files that twicetold did not write; it is never replaced. "
                 "Give another name."
             )
+    _check_parent(out)
+
+
+def _check_parent(out: Path) -> None:
     parent = out.absolute().parent
     if not parent.is_dir():
         raise TwicetoldError(f"{parent} is not a folder. Make it first.")
@@ -70,9 +72,50 @@ def check_new_folder(out: Path, *, force: bool) -> None:
         raise TwicetoldError(f"{parent} cannot be written to. Give a folder that can.")
 
 
+@dataclass(frozen=True)
+class Claim:
+    """A folder's name held by this run alone, from before the work until after the writing."""
+
+    out: Path
+
+    @contextmanager
+    def filled(self) -> Iterator[Path]:
+        """Fill a folder beside the claimed one, put in its place only when all of it is there.
+
+        Yields
+        ------
+        Path
+            The folder to fill. It is removed if the body raises.
+        """
+        part = self.out.with_name(f".{self.out.name}.part-{uuid.uuid4().hex[:8]}")
+        part.mkdir()
+        try:
+            yield part
+            _swap(part, self.out)
+        finally:
+            shutil.rmtree(part, ignore_errors=True)
+
+
+@contextmanager
+def claimed(out: Path, *, force: bool = False) -> Iterator[Claim]:
+    """Hold a folder's name for one run, and clear away what a killed run left of it.
+
+    Raises
+    ------
+    TwicetoldError
+        As :func:`check_new_folder`, or when another run holds the name.
+    """
+    _check_parent(out)
+    place = out.absolute()
+    with _lock(place):
+        _sweep(place)
+        check_new_folder(out, force=force)
+        yield Claim(place)
+
+
 @contextmanager
 def new_folder(out: Path, *, force: bool = False) -> Iterator[Path]:
-    """Fill a folder beside ``out`` and put it in place only when all of it is there.
+    """Claim a folder and fill it: all of it appears, or nothing.
 
     Yields
     ------
@@ -82,19 +125,10 @@ def new_folder(out: Path, *, force: bool = False) -> Iterator[Path]:
     Raises
     ------
     TwicetoldError
-        As :func:`check_new_folder`, or when another run is writing the same folder.
+        As :func:`claimed`.
     """
-    check_new_folder(out, force=force)
-    out = out.absolute()
-    with _lock(out):
-        _sweep(out)
-        part = out.with_name(f".{out.name}.part-{os.getpid()}-{uuid.uuid4().hex[:8]}")
-        part.mkdir()
-        try:
-            yield part
-            _swap(part, out)
-        finally:
-            shutil.rmtree(part, ignore_errors=True)
+    with claimed(out, force=force) as claim, claim.filled() as part:
+        yield part
 
 
 def _swap(part: Path, out: Path) -> None:
@@ -124,48 +158,53 @@ def _sweep(out: Path) -> None:
 
 @contextmanager
 def _lock(out: Path) -> Iterator[None]:
+    """Hold a lock that the system lets go of by itself when the run ends, however it ends."""
     path = out.with_name(f".{out.name}.lock")
-    token = json.dumps({"pid": os.getpid(), "time": int(time.time())})
-    for _ in range(2):
+    while True:
+        handle = os.open(path, os.O_CREAT | os.O_RDWR, 0o666)
         try:
-            handle = os.open(path, os.O_CREAT | os.O_EXCL | os.O_WRONLY)
-        except FileExistsError:
-            if not _stale(path):
-                raise TwicetoldError(
-                    f"Another run is writing {out.name} just now. Wait for it, or give another "
-                    f"name (if none is running, remove {path.name})."
-                ) from None
-            with suppress(FileNotFoundError):
-                path.unlink()
-        else:
-            with os.fdopen(handle, "w") as lock:
-                lock.write(token)
-            break
-    else:
-        raise TwicetoldError(f"{path.name} cannot be taken. Remove it if no run is going on.")
+            _take(handle)
+            if _still_there(handle, path):
+                break
+            os.close(handle)  # the run before took it away just now: take a new one
+        except BlockingIOError:
+            os.close(handle)
+            raise TwicetoldError(
+                f"Another run is writing {out.name} just now. Wait for it, or give another name."
+            ) from None
+        except OSError as err:
+            os.close(handle)
+            raise TwicetoldError(
+                f"{out.parent} lets no file be locked ({err.strerror}). Give a folder elsewhere."
+            ) from err
     try:
         yield
     finally:
-        with suppress(FileNotFoundError):
-            path.unlink()
-
-
-def _stale(path: Path) -> bool:
-    try:
-        held = json.loads(path.read_text())
-        pid, since = int(held["pid"]), float(held["time"])
-    except (OSError, ValueError, KeyError, TypeError):
-        # A lock without content: its writer was killed between making and filling it, or is
-        # filling it this very moment.
         with suppress(OSError):
-            return time.time() - path.stat().st_mtime > 5
-        return True
-    if time.time() - since > STALE_LOCK:
-        return True
+            path.unlink()
+        os.close(handle)
+
+
+def _still_there(handle: int, path: Path) -> bool:
     try:
-        os.kill(pid, 0)
-    except ProcessLookupError:
-        return True
-    except OSError:
+        return os.path.samestat(os.fstat(handle), path.stat())
+    except FileNotFoundError:
         return False
-    return False
+
+
+if sys.platform == "win32":
+
+    def _take(handle: int) -> None:
+        import msvcrt
+
+        try:
+            msvcrt.locking(handle, msvcrt.LK_NBLCK, 1)
+        except PermissionError as err:
+            raise BlockingIOError from err
+
+else:
+
+    def _take(handle: int) -> None:
+        import fcntl
+
+        fcntl.flock(handle, fcntl.LOCK_EX | fcntl.LOCK_NB)

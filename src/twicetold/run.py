@@ -9,11 +9,12 @@ import math
 import platform
 import time
 from collections.abc import Mapping
+from contextlib import AbstractContextManager, nullcontext
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from twicetold import __version__
-from twicetold.folders import check_new_folder, new_folder, write_text
+from twicetold.folders import Claim, claimed, new_folder, write_text
 from twicetold.plan import COLUMNS, Plan
 
 if TYPE_CHECKING:
@@ -94,6 +95,11 @@ def resolved_plan(path: Path, plan: Plan) -> Plan:
     return resolve(read_catalogue(path, rules_of(plan)), plan)[0]
 
 
+def _claim(out: Path | None, *, force: bool) -> AbstractContextManager[Claim | None]:
+    """Claim a folder before the work starts, when one is wanted at all."""
+    return nullcontext() if out is None else claimed(out, force=force)
+
+
 def motif_run(
     path: Path,
     motif: str,
@@ -110,21 +116,20 @@ def motif_run(
     from twicetold.evidence import test_motif
     from twicetold.evidence.words import tell
 
-    if page is not None:
-        check_new_folder(page, force=force)
-    catalogue = read_catalogue(path, rules_of(plan))
-    ranking = test_motif(catalogue, motif, plan, pool=pool, cache=cache)
-    evidence = ranking.evidence[0]
-    record = evidence_record(ranking, evidence)
-    if page is not None:
-        from twicetold.report import write_pages
+    with _claim(page, force=force) as claim:
+        catalogue = read_catalogue(path, rules_of(plan))
+        ranking = test_motif(catalogue, motif, plan, pool=pool, cache=cache)
+        evidence = ranking.evidence[0]
+        record = evidence_record(ranking, evidence)
+        if claim is not None:
+            from twicetold.report import write_pages
 
-        command = f"twicetold test {path.name} {_quoted(evidence.motif_id)} --plan plan.toml"
-        with new_folder(page, force=force) as part:
-            write_text(part / "test.json", _json(record))
-            write_text(part / "plan.toml", ranking.plan.to_toml())
-            write_pages(ranking, part, command={"test": command})
-    return _json(record).rstrip("\n") if as_json else tell(ranking, evidence)
+            command = f"twicetold test {path.name} {_quoted(evidence.motif_id)} --plan plan.toml"
+            with claim.filled() as part:
+                write_text(part / "test.json", _json(record))
+                write_text(part / "plan.toml", ranking.plan.to_toml())
+                write_pages(ranking, part, command={"test": command})
+        return _json(record).rstrip("\n") if as_json else tell(ranking, evidence)
 
 
 def evidence_record(ranking: Ranking, evidence: MotifEvidence) -> dict[str, Any]:
@@ -173,25 +178,25 @@ def rank_run(
     from twicetold.evidence.ranking import check_order
 
     check_order(by)
-    check_new_folder(out, force=force)
-    clock = [time.perf_counter()]
-    catalogue = read_catalogue(path, rules_of(plan))
-    clock.append(time.perf_counter())
-    moved = None
-    if without:
-        from twicetold.evidence.withdrawal import rank_without
-
-        ranking, moved = rank_without(catalogue, plan, without, pool=pool, by=by, cache=cache)
-    else:
-        ranking = rank_catalogue(catalogue, plan, pool=pool, by=by, cache=cache)
-    clock.append(time.perf_counter())
-    with new_folder(out, force=force) as part:
-        _write_run(ranking, part, path=path, by=by, moved=moved)
+    with claimed(out, force=force) as claim:
+        clock = [time.perf_counter()]
+        catalogue = read_catalogue(path, rules_of(plan))
         clock.append(time.perf_counter())
-        seconds = [round(b - a, 3) for a, b in itertools.pairwise(clock)]
-        timings = dict(zip(("read", "compute", "write"), seconds, strict=True))
-        write_text(part / "timings.json", _json({"seconds": timings}))
-    return _said(ranking, out, seconds, moved)
+        moved = None
+        if without:
+            from twicetold.evidence.withdrawal import rank_without
+
+            ranking, moved = rank_without(catalogue, plan, without, pool=pool, by=by, cache=cache)
+        else:
+            ranking = rank_catalogue(catalogue, plan, pool=pool, by=by, cache=cache)
+        clock.append(time.perf_counter())
+        with claim.filled() as part:
+            _write_run(ranking, part, path=path, by=by, moved=moved)
+            clock.append(time.perf_counter())
+            seconds = [round(b - a, 3) for a, b in itertools.pairwise(clock)]
+            timings = dict(zip(("read", "compute", "write"), seconds, strict=True))
+            write_text(part / "timings.json", _json({"seconds": timings}))
+        return _said(ranking, out, seconds, moved)
 
 
 def _write_run(ranking: Ranking, folder: Path, *, path: Path, by: str, moved: Any) -> None:
@@ -325,17 +330,16 @@ def power_run(
     from twicetold.evidence.power import catalogue_power
     from twicetold.evidence.words import tell_power
 
-    if out is not None:
-        check_new_folder(out, force=force)
-    catalogue = read_catalogue(path, rules_of(plan))
-    table = catalogue_power(catalogue, plan, pool=pool, cache=cache)
-    if out is not None:
-        from twicetold.report import write_power
+    with _claim(out, force=force) as claim:
+        catalogue = read_catalogue(path, rules_of(plan))
+        table = catalogue_power(catalogue, plan, pool=pool, cache=cache)
+        if claim is not None:
+            from twicetold.report import write_power
 
-        with new_folder(out, force=force) as part:
-            write_csv(table.frame, part / "power.csv")
-            write_power(table, part, notice=catalogue.notice)
-    return tell_power(table)
+            with claim.filled() as part:
+                write_csv(table.frame, part / "power.csv")
+                write_power(table, part, notice=catalogue.notice)
+        return tell_power(table)
 
 
 def supplement_run(
@@ -344,12 +348,12 @@ def supplement_run(
     """Write the deposit of a run, and say whether verdicts move on the rounded coordinates."""
     from twicetold.report.supplement import read_run, write_supplement
 
-    check_new_folder(out, force=force)
-    moved = None
-    if rounded:
-        moved = rounded_again(read_run(run), pool)
-    with new_folder(out, force=force) as part:
-        names = write_supplement(run, part, cldf=cldf, rounded=moved)
+    with claimed(out, force=force) as claim:
+        moved = None
+        if rounded:
+            moved = rounded_again(read_run(run), pool)
+        with claim.filled() as part:
+            names = write_supplement(run, part, cldf=cldf, rounded=moved)
     lines = [f"Wrote {len(names)} files to {out}."]
     if moved is not None:
         others = int((moved["moved"] == "yes").sum())
