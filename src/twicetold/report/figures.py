@@ -9,6 +9,7 @@ from typing import TYPE_CHECKING, Any
 from twicetold.errors import TwicetoldError
 from twicetold.report import category_charts, maps, motif_charts, overview_charts, shares_charts
 from twicetold.report.common import Spec, is_restricted
+from twicetold.report.steady import steady_pdf, steady_svg
 from twicetold.report.theme import config
 
 if TYPE_CHECKING:
@@ -187,11 +188,11 @@ def render(chart: alt.TopLevelMixin | Spec, kind: str, *, ppi: int = 300) -> byt
 
     options: dict[str, Any] = {"vl_version": _grammar()}
     if kind == "svg":
-        return str(vl_convert.vegalite_to_svg(spec, **options)).encode()
+        return steady_svg(str(vl_convert.vegalite_to_svg(spec, **options))).encode()
     if kind == "png":
         return bytes(vl_convert.vegalite_to_png(spec, ppi=ppi, **options))
     if kind == "pdf":
-        return bytes(vl_convert.vegalite_to_pdf(spec, **options))
+        return steady_pdf(bytes(vl_convert.vegalite_to_pdf(spec, **options)))
     options["renderer"] = "svg"
     return str(vl_convert.vegalite_to_html(spec, bundle=True, **options)).encode()
 
