@@ -18,10 +18,14 @@ if TYPE_CHECKING:
     from twicetold.plan import Plan
 
 WIDTH = 760
-#: Coordinates on maps are given to this many degrees, unless the plan asks for exact ones.
-DRAWN_DEGREES = 0.1
+#: Places that a seeded script made up need no protection: they are drawn this finely (degrees).
+INVENTED_DEGREES = 0.1
+#: Places that round to one spot are set on a ring this wide, in parts of the rounding step.
+_RING = 0.28
 STATES = ("attested", "searched, not found", "not searched", "not applicable")
 _MANY = 400
+#: A diagonal cross, as Vega has none.
+_SALTIRE = "M-1,-1L1,1M-1,1L1,-1"
 
 
 class Atlas:
@@ -40,10 +44,9 @@ class Atlas:
         self.catalogue = catalogue
         self.graph = graph
         self.shown = open_traditions(catalogue)
-        step = min(plan.report.round_degrees, DRAWN_DEGREES)
-        self.drawn_degrees = step
-        self.lon = _rounded(catalogue.longitude, step)
-        self.lat = _rounded(catalogue.latitude, step)
+        step = plan.report.round_degrees
+        self.drawn_degrees = min(step, INVENTED_DEGREES) if catalogue.invented else step
+        self.lon, self.lat = _drawn(catalogue, self.drawn_degrees)
         self.view: View = fit_view(self.lon[self.shown], self.lat[self.shown])
         self.land = land_features(catalogue.land)
         self.traditions = self._traditions()
@@ -191,8 +194,8 @@ def _points(atlas: Atlas, present: list[str], n: int) -> list[Spec]:
     looks = {
         STATES[0]: ("circle", ink, paper, _size(n, 74)),
         STATES[1]: ("circle", paper, soft, _size(n, 24)),
-        STATES[2]: ("cross", faint, faint, _size(n, 20)),
-        STATES[3]: ("stroke", faint, faint, _size(n, 40)),
+        STATES[2]: ("cross", faint, paper, _size(n, 62)),
+        STATES[3]: (_SALTIRE, soft, soft, _size(n, 34)),
     }
 
     def scale(k: int) -> dict[str, Any]:
@@ -201,7 +204,11 @@ def _points(atlas: Atlas, present: list[str], n: int) -> list[Spec]:
     def channel(k: int) -> dict[str, Any]:
         return {"field": "state", "type": "nominal", "scale": scale(k), "title": None}
 
-    look = {"shape": channel(0), "fill": channel(1), "stroke": channel(2), "size": channel(3)}
+    size: Spec = {"value": looks[STATES[1]][3], "condition": []}
+    for state in (STATES[0], *present[2:]):
+        test = {"test": f"datum.state === '{state}'", "value": looks[state][3]}
+        size["condition"].append(test)
+    look = {"shape": channel(0), "fill": channel(1), "stroke": channel(2), "size": size}
     find = {"data": {"name": "cells"}, "key": "i", "fields": ["s", "c", "j"]}
     joined = [
         {"lookup": "i", "from": find, "default": None},
@@ -303,7 +310,26 @@ def _names(catalogue: Catalogue, who: list[int]) -> str:
     return f"{len(who)}: {', '.join(n for n in names if known(n))}{more}"
 
 
-def _rounded(degrees: npt.NDArray[np.float64], step: float) -> npt.NDArray[np.float64]:
+def _drawn(
+    catalogue: Catalogue, step: float
+) -> tuple[npt.NDArray[np.float64], npt.NDArray[np.float64]]:
+    """Where traditions are drawn: rounded, and set on a ring where several fall on one spot.
+
+    A place on the ring follows from the order of the ids alone, and so tells nothing of the place.
+    """
+    lon, lat = catalogue.longitude, catalogue.latitude
     if step <= 0:
-        return np.round(degrees, 4)
-    return np.round(np.round(degrees / step) * step, 4)
+        return np.round(lon, 4), np.round(lat, 4)
+    lon, lat = np.round(lon / step) * step, np.round(lat / step) * step
+    cells = np.rint(lon / step).tolist(), np.rint(lat / step).tolist()
+    spots: dict[tuple[float, float], list[int]] = {}
+    for i, spot in enumerate(zip(*cells, strict=True)):
+        spots.setdefault(spot, []).append(i)
+    for here in spots.values():
+        if len(here) > 1:
+            turn = 2 * np.pi * np.arange(len(here)) / len(here)
+            wide = max(float(np.cos(np.radians(lat[here[0]]))), 0.1)
+            lon[here] += _RING * step * np.cos(turn) / wide
+            lat[here] += _RING * step * np.sin(turn)
+    lon = (lon + 180.0) % 360.0 - 180.0
+    return np.round(lon, 4), np.clip(np.round(lat, 4), -90.0, 90.0)

@@ -241,7 +241,7 @@ def stability_chart(evidence: MotifEvidence, notice: str = "") -> Spec:
         "width": 560,
         "height": _ROW * len(kinds),
         "data": {"name": "runs"},
-        "mark": {"type": "point", "filled": True, "size": 120, "opacity": 1},
+        "mark": {"type": "point", "filled": True, "size": 72, "opacity": 1},
         "encoding": encoding,
         "datasets": {"runs": rows},
         "usermeta": {"height": _ROW * len(kinds)},
@@ -250,7 +250,7 @@ def stability_chart(evidence: MotifEvidence, notice: str = "") -> Spec:
 
 #: A kind that needs more than one line is labelled on its first line only.
 _BLANKS = "indexof(datum.value, '\\u2009') >= 0 ? '' : datum.value"
-_PER_LINE = 24
+_PER_LINE = 18
 
 
 def _runs(table: pd.DataFrame, own: str) -> tuple[list[dict[str, Any]], list[str]]:

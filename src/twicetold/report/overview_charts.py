@@ -24,14 +24,12 @@ def signature_chart(ranking: Ranking) -> Spec:
     points = _points(ranking)
     top = max((p["h"] for p in points), default=10)
     layers: list[Spec] = []
-    datasets: dict[str, Any] = {"points": points}
-    said = []
-    if ranking.bands is not None:
-        bands, worlds = _bands(ranking, top)
-        datasets["bands"] = bands
-        layers += _band_layers(worlds)
-        said = [f"{WORLDS[w][0]}" for w in worlds]
-    layers.append(_point_layer(points))
+    bands, worlds = _bands(ranking, top) if ranking.bands is not None else ([], [])
+    datasets: dict[str, Any] = {"points": points} | ({"bands": bands} if bands else {})
+    axes = _axes(points, bands)
+    layers += _band_layers(worlds, axes) if bands else []
+    said = [WORLDS[w][0] for w in worlds] if bands else []
+    layers.append(_point_layer(points, axes))
     shown = sum(p["n"] for p in points)
     subtitle = f"{plural(shown, 'motif')}; larger signs stand for several motifs at one place"
     band = f"bands: where 95 % of motifs would lie in the {' and the '.join(said)} world"
@@ -101,19 +99,23 @@ def _bands(ranking: Ranking, top: int) -> tuple[list[dict[str, Any]], list[str]]
     return rows, worlds
 
 
-def _axes(label: bool = True) -> tuple[dict[str, Any], dict[str, Any]]:
-    axis = {"grid": False, "tickCount": 6, "labelOverlap": True}
-    x = {"type": "quantitative", "scale": {"type": "log", "nice": False}}
-    y = {"type": "quantitative", "scale": {"type": "log", "nice": False}}
-    if label:
-        x["axis"] = axis | {"title": "holders (traditions that have the motif)", "format": "d"}
-        y["axis"] = axis | {"title": "clusters", "format": "d"}
-    return x, y
+def _axes(points: list[dict[str, Any]], bands: list[dict[str, Any]]) -> tuple[Spec, Spec]:
+    """Log axes with room around the outermost points and bands."""
+    axis = {"grid": False, "tickCount": 6, "labelOverlap": True, "format": "d"}
+    across = [p["x"] for p in points] + [r["h"] for r in bands]
+    up = [p["y"] for p in points] + [r[k] for r in bands for k in "lu" if r[k]]
+
+    def along(title: str, values: list[float]) -> Spec:
+        ends = [sig(0.88 * min(values, default=1)), sig(1.12 * max(values, default=10))]
+        scale = {"type": "log", "nice": False, "domain": ends}
+        return {"type": "quantitative", "scale": scale, "axis": axis | {"title": title}}
+
+    return along("holders (traditions that have the motif)", across), along("clusters", up)
 
 
-def _band_layers(worlds: list[str]) -> list[Spec]:
+def _band_layers(worlds: list[str], axes: tuple[Spec, Spec]) -> list[Spec]:
     """Band, median and name of each world; the name stands at the end of its median."""
-    x, y = _axes()
+    x, y = axes
     out: list[Spec] = []
     dashes = {"emergence": [1, 0], "contact": [7, 4]}
     for world in worlds:
@@ -145,12 +147,12 @@ def _band_layers(worlds: list[str]) -> list[Spec]:
     return out
 
 
-def _point_layer(points: list[dict[str, Any]]) -> Spec:
-    x, y = _axes()
+def _point_layer(points: list[dict[str, Any]], axes: tuple[Spec, Spec]) -> Spec:
+    x, y = axes
     present = [v for v in VERDICTS if any(p["v"] == v.verdict for p in points)]
     domain = [v.verdict for v in present]
     most = max((p["n"] for p in points), default=1)
-    usual = 46 if len(points) < 600 else 26
+    usual = 62 if len(points) < 300 else 40 if len(points) < 900 else 24
     return {
         "data": {"name": "points"},
         "mark": {"type": "point", "filled": True, "opacity": 0.9, "cursor": "pointer"}

@@ -36,11 +36,11 @@ def style() -> str:
 
 @lru_cache(maxsize=1)
 def drawing_library() -> str:
-    """Vega and Vega-Lite as one script, as the figure converter carries them."""
+    """Vega, Vega-Lite and Vega-Embed as one script, as the figure converter carries them."""
     import vl_convert
 
     text = vl_convert.javascript_bundle(
-        "window.vega = vega; window.vegaLite = vegaLite;",
+        "window.vegaEmbed = vegaEmbed;",
         vl_version=str(vl_convert.get_vegalite_versions()[-1]),
     )
     return str(text)

@@ -91,14 +91,21 @@ def reason_sentence(evidence: MotifEvidence) -> str:
 
 def comparison_sentence(comparison: Comparison) -> str:
     """Say in words what one world gives and what was observed."""
-    words = STATISTICS.get(comparison.statistic, comparison.statistic)
+    words = counted(comparison.statistic, comparison.observed)
     more = "at least" if comparison.direction == "many" else "at most"
     p = as_float(comparison.p)
-    out = f"Observed {number(comparison.observed)} {words}; this world gives "
-    out += f"{number(comparison.expected)} on average"
+    out = f"Observed {words}; this world gives {number(comparison.expected)} on average"
     if known(p):
         out += f", and {more} as many with probability {probability(p)}"
     return out + "." + (f" {_sentence(comparison.note)}" if comparison.note else "")
+
+
+def counted(statistic: str, value: float) -> str:
+    """Write a statistic's value with its word: 1 join, 3 joins."""
+    many = STATISTICS.get(statistic, statistic)
+    if value == 1 and statistic.startswith(("joins", "clusters", "strands")):
+        many = many.removesuffix("s")
+    return f"{number(value)} {many}"
 
 
 def finding(comparison: Comparison, alpha: float) -> str:
@@ -115,8 +122,7 @@ def finding(comparison: Comparison, alpha: float) -> str:
 
 def world_heading(world: str) -> str:
     """Heading of a world's panel: what it supposes."""
-    supposes = WORLDS.get(world, (world, world))[1]
-    return supposes[0].upper() + supposes[1:]
+    return f"Suppose {WORLDS.get(world, (world, world))[1]}"
 
 
 def hidden_sentence(evidence: MotifEvidence) -> str:
@@ -128,12 +134,12 @@ def hidden_sentence(evidence: MotifEvidence) -> str:
     if log_sd == float("inf"):
         return (
             "No smooth unmeasured leaning of whole regions, however strong, makes the "
-            "emergence-only world give these joins 5 % of the time."
+            "emergence-only world give these joins 5\u202f% of the time."
         )
     if log_sd <= 0:
         return (
             "No hidden leaning is needed: the emergence-only world as it stands gives these joins "
-            "at least 5 % of the time."
+            "at least 5\u202f% of the time."
         )
     length = as_float(bound.get("length_km"))
     scale = f" over some {number(round(length, -1))} km" if known(length) else ""
@@ -145,7 +151,7 @@ def hidden_sentence(evidence: MotifEvidence) -> str:
         else ""
     )
     return (
-        f"To give these joins without contact 5 % of the time, something nobody measured would "
+        "To give these joins without contact 5\u202f% of the time, something nobody measured would "
         f"have to make whole regions lean towards the motif: a smooth leaning{scale} of log-sd "
         f"{number(log_sd)}{apart} in how readily traditions show it (log scale{spread})."
     )
@@ -191,7 +197,7 @@ def shares_sentence(evidence: MotifEvidence) -> str:
             shares.routes, shares.mean, shares.low, shares.high, strict=True
         )
     ]
-    return f"Share of gains by route, mean and 90 % interval: {'; '.join(parts)}."
+    return f"Share of gains by route, mean and 90\u202f% interval: {'; '.join(parts)}."
 
 
 def catalogue_sentence(ranking: Ranking) -> str:

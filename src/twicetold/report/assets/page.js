@@ -54,12 +54,12 @@
       vl.padding = 2;
     }
     vl.datasets = datasets;
-    return vegaLite.compile(vl, { logger: quiet() }).spec;
+    return vl;
   }
 
-  function quiet() {
-    const log = vega.logger(vega.Error);
-    return log;
+  /* Nothing of the drawing library's own furniture; only errors are worth a word. */
+  function options(renderer) {
+    return { mode: "vega-lite", renderer: renderer, actions: false, defaultStyle: false, logLevel: 1 };
   }
 
   /* Tooltip: plain text only, each value in its own direction. */
@@ -103,25 +103,32 @@
   function draw(plot) {
     const entry = drawn.get(plot);
     const width = Math.floor(plot.clientWidth);
-    if (!width || entry.width === width) return;
+    if (!width || entry.width === width) return entry.done;
     entry.width = width;
-    if (entry.view) entry.view.finalize();
-    plot.textContent = "";
-    const spec = compiled(entry, width, true);
-    const view = new vega.View(vega.parse(spec), {
-      renderer: "svg",
-      container: plot,
-      logLevel: vega.Error,
-    });
-    view.tooltip(tooltip);
-    view.run();
-    entry.view = view;
-    if (home.clicked && plot.dataset.figure === "figure-clusters") {
-      view.addEventListener("click", function (event, item) {
-        if (item && item.datum) home.clicked(item.datum);
-      });
+    const held = plot.offsetHeight;
+    if (entry.result) {
+      entry.result.finalize();
+      /* The page keeps its length while a figure is drawn anew. */
+      plot.style.minHeight = held + "px";
     }
-    plot.setAttribute("data-drawn", "yes");
+    const box = document.createElement("div");
+    const settings = Object.assign(options("svg"), { tooltip: tooltip });
+    entry.done = vegaEmbed(box, compiled(entry, width, true), settings).then(function (result) {
+      if (entry.width !== width) {
+        result.finalize();
+        return;
+      }
+      plot.replaceChildren(box);
+      plot.style.minHeight = "";
+      entry.result = result;
+      if (home.clicked && plot.dataset.figure === "figure-clusters") {
+        result.view.addEventListener("click", function (event, item) {
+          if (item && item.datum) home.clicked(item.datum);
+        });
+      }
+      plot.setAttribute("data-drawn", "yes");
+    });
+    return entry.done;
   }
 
   function save(plot, format) {
@@ -130,14 +137,14 @@
     const source = Object.assign({}, entry.spec, { config: shared.config });
     const vl = fitted(JSON.parse(JSON.stringify(source)), width);
     vl.datasets = entry.datasets;
-    const view = new vega.View(vega.parse(vegaLite.compile(vl, { logger: quiet() }).spec), {
-      renderer: "none",
-    });
-    view.toImageURL(format, format === "png" ? 300 / 96 : 1).then(function (url) {
-      const link = document.createElement("a");
-      link.href = url;
-      link.download = plot.dataset.figure.replace("figure-", "") + "." + format;
-      link.click();
+    vegaEmbed(document.createElement("div"), vl, options("svg")).then(function (result) {
+      return result.view.toImageURL(format, format === "png" ? 300 / 96 : 1).then(function (url) {
+        result.finalize();
+        const link = document.createElement("a");
+        link.href = url;
+        link.download = plot.dataset.figure.replace("figure-", "") + "." + format;
+        link.click();
+      });
     });
   }
 
@@ -184,7 +191,7 @@
       plots.forEach(draw);
     });
     home.drawAll = function () {
-      plots.forEach(draw);
+      return Promise.all(plots.map(draw));
     };
   }
   start();

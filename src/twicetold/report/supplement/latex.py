@@ -57,7 +57,10 @@ def fragment(table: Table) -> str:
         [_shown(text, c) for text, c in zip(row, table.columns, strict=True)] for row in table.rows
     ]
     columns = [[row[k] for row in cells] for k in range(len(table.columns))]
-    natural = [_width(c, col) for c, col in zip(table.columns, columns, strict=True)]
+    # A column without a single entry is left to the CSV table.
+    natural = [
+        _width(c, col) if any(col) else 0.0 for c, col in zip(table.columns, columns, strict=True)
+    ]
     panels = _panels(table, natural)
     head = (
         f"% {table.name}: needs array, booktabs, longtable and \\otherscript; see supplement.tex\n"
@@ -84,7 +87,7 @@ def _panels(table: Table, natural: list[float]) -> list[_Panel]:
     panels: list[list[int]] = []
     used = math.inf
     for k in range(len(table.columns)):
-        if k in names:
+        if k in names or not natural[k]:
             continue
         if used + widths[k] + GAP > LINE:
             panels.append(list(names))
