@@ -4,11 +4,12 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass, field
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import numpy.typing as npt
 
+from twicetold import display
 from twicetold.references.law import Law
 
 if TYPE_CHECKING:
@@ -136,6 +137,13 @@ class MotifEvidence:
     power: pd.DataFrame | None = None
     pairs: pd.DataFrame | None = None
 
+    def figure(self, kind: str, **options: Any) -> Any:
+        """Give a figure (``worlds``, ...) as an altair chart; ``map`` needs ``ranking=``."""
+        return display.as_figure(self, kind, **options)
+
+    def _repr_html_(self) -> str:
+        return display.as_html(self)
+
 
 @dataclass(frozen=True)
 class Ranking:
@@ -182,3 +190,10 @@ class Ranking:
     def to_frame(self) -> pd.DataFrame:
         """Give a copy of the ranked table."""
         return self.motifs.copy()
+
+    def figure(self, kind: str, **options: Any) -> Any:
+        """Give a figure of the catalogue, or with ``motif=`` of a motif, as an altair chart."""
+        return display.as_figure(self, kind, **options)
+
+    def _repr_html_(self) -> str:
+        return display.as_html(self)
