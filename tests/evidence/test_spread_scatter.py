@@ -34,7 +34,7 @@ def test_path_of_five_exactly():
         ("transmission", "strands", True),
         ("transmission", "joins", False),
     ]
-    tolerance = 4 * np.sqrt(0.367 * 0.633 / worlds.contact.effective(3))
+    tolerance = 4 * np.sqrt(0.367 * 0.633 / worlds.contact.law("joins", 3).effective)
     for c in found:  # on a path, clusters = holders - joins, and strands are clusters
         assert abs(c.p - 0.366902) < tolerance
         assert c.p_attainable <= c.p
@@ -74,7 +74,7 @@ def test_far_turnovers_are_walked():
     n, edges = small_graphs()["grid3"]
     what = Transmission(as_contact_graph(n, edges), between(0.05, 0.9, 0.95), walks=500)
     worlds = scatter_worlds(what, [4], largest=6)
-    own = {s.turnover: s.own is not None for s in worlds.settings}
+    own = {s.turnover: 4 in s.walked for s in worlds.settings}
     assert own[0.05]
     assert not own[0.95]
     assert worlds.settings[0].turnover == 0.9

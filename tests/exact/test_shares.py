@@ -6,8 +6,8 @@ import dataclasses
 from itertools import combinations
 
 import numpy as np
-from test_spread_solver import Solver
 
+from subset_solver import Solver
 from twicetold.evidence.shares import build_bank, fit_posterior, simplex
 from twicetold.spread import SpreadModel
 from zoo import as_contact_graph

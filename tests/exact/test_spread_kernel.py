@@ -4,8 +4,8 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
-from test_spread_solver import Solver
 
+from subset_solver import Solver
 from twicetold.randomness import Stream, chunk_words
 from twicetold.spread import STATISTICS, SpreadModel, chain_tables, walk_chunk
 from zoo import as_contact_graph

@@ -9,8 +9,8 @@ from math import comb, factorial
 
 import numpy as np
 import pytest
-from test_spread_solver import pieces
 
+from subset_solver import pieces
 from twicetold.spread import STATISTICS
 from twicetold.spread.rates import RateModel, rate_world
 from zoo import as_contact_graph, small_graphs

@@ -4,8 +4,8 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
-from test_spread_solver import PATH5, Solver
 
+from subset_solver import PATH5, Solver
 from twicetold.references.pvalue import p_few
 from twicetold.spread import SpreadError, SpreadModel, cap_for, chain_tables, spread_world
 from twicetold.spread.world import effective_size, expected_events, spread_words, work_size

@@ -44,11 +44,13 @@ class Worlds:
     comparisons : mapping of int to tuple of Comparison
     shares : mapping of int to RouteShares
     power : mapping of int to (float, float)
-        By number of holders: chance to reject emergence-only under contact, and transmission-only
-        under emergence.
+        By motif: chance to reject emergence-only under contact, and transmission-only under
+        emergence, at its number of holders.
     fits, tables : mapping
         See :class:`Ranking`.
     notes : tuple of str
+    prevalence, contact_bands : pandas.DataFrame or None
+        See :class:`twicetold.evidence.spreading.SpreadResult`.
     """
 
     comparisons: Mapping[int, tuple[Comparison, ...]]
@@ -57,6 +59,8 @@ class Worlds:
     fits: Mapping[str, object]
     tables: Mapping[str, pd.DataFrame]
     notes: tuple[str, ...] = ()
+    prevalence: pd.DataFrame | None = None
+    contact_bands: pd.DataFrame | None = None
 
 
 def rank_catalogue(
@@ -157,6 +161,7 @@ def compute_worlds(study: Study, observed: ObservedMotifs, pool: Pool, *, cache:
     tables: dict[str, pd.DataFrame] = {}
     shares: Mapping[int, RouteShares] = {}
     power: Mapping[int, tuple[float, float]] = {}
+    prevalence = bands = None
     if "emergence" in asked:
         emergence = against_emergence(study, observed, pool)
         parts.append(emergence.comparisons)
@@ -170,16 +175,20 @@ def compute_worlds(study: Study, observed: ObservedMotifs, pool: Pool, *, cache:
     if {"contact", "transmission", "shares"} & set(asked):
         from twicetold.evidence.spreading import against_spread
 
-        spread = against_spread(study, observed, pool, cache=cache)
+        spread = against_spread(
+            study, observed, pool, cache=cache, emergence=parts[0] if "emergence" in asked else {}
+        )
         parts.append(spread.comparisons)
         shares, power = spread.shares, spread.power
         fits |= spread.fits
         tables |= spread.tables
         notes += spread.notes
+        prevalence, bands = spread.prevalence, spread.bands
     joined = {
         motif: tuple(c for part in parts for c in part.get(motif, ())) for motif in observed.index
     }
-    return Worlds(joined, shares, power, fits, tables, tuple(dict.fromkeys(notes)))
+    said = tuple(dict.fromkeys(notes))
+    return Worlds(joined, shares, power, fits, tables, said, prevalence, bands)
 
 
 def primary(comparisons: Sequence[Comparison], world: str) -> Comparison | None:
@@ -264,7 +273,7 @@ def _records(table: pd.DataFrame) -> list[dict[str, Any]]:
 def _grounds(
     study: Study, worlds: Worlds, row: Mapping[str, Any], by: Mapping[str, float]
 ) -> Grounds:
-    power = worlds.power.get(int(row["holders"]), (math.nan, math.nan))
+    power = worlds.power.get(int(row["_motif"]), (math.nan, math.nan))
     return Grounds(
         emergence=float(by["emergence"]),
         ancestry=float(by["ancestry"]),

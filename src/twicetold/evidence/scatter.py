@@ -13,7 +13,7 @@ number, the observed motif counting as one effective draw more.
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, field, fields, replace
 from typing import Literal
 
 import numpy as np
@@ -21,11 +21,13 @@ import numpy.typing as npt
 
 from twicetold.evidence.confidence import ConfidenceSet, Point
 from twicetold.evidence.results import Comparison
+from twicetold.evidence.setting import KEPT, Setting, packed, unpacked
+from twicetold.evidence.shares.cache import open_entry
 from twicetold.graph import ContactGraph
 from twicetold.references.law import Law
 from twicetold.references.pvalue import p_few, p_many
 from twicetold.spread.chain import SpreadModel
-from twicetold.spread.world import SpreadWorld, spread_world
+from twicetold.spread.world import GROWTH, SpreadWorld, spread_world
 from twicetold.workers import Pool
 
 FloatArray = npt.NDArray[np.float64]
@@ -36,6 +38,9 @@ World = Literal["contact", "transmission"]
 INHERITANCE = (0.0, 0.25, 0.5, 0.75, 1.0)
 #: Reweighting to another turnover must keep this part of the effective draws; else it is walked.
 KEEP = 0.25
+#: Worlds beside the first (other inheritance shares and recordings) get this part of the walks:
+#: 10,000 then leave them the 2,000 effective draws a p-value near .05 needs.
+BESIDE = 0.4
 #: World -> (statistic, direction), the primary one first.
 MEASURES: dict[World, tuple[tuple[str, Literal["many", "few"]], ...]] = {
     "contact": (("joins", "few"), ("strands", "many")),
@@ -91,27 +96,6 @@ class Transmission:
 
 
 @dataclass(frozen=True)
-class Setting:
-    """One world of the worst case, and where its draws come from."""
-
-    inheritance: float
-    kappa: float
-    turnover: float
-    centre: SpreadWorld
-    own: SpreadWorld | None
-
-    def law(self, statistic: str, count: int) -> Law | None:
-        """Law at this setting: reweighted from the centre, or walked where that loses too much."""
-        if self.own is not None and count in self.own.counts:
-            if self.own.effective(count) <= 0.0:
-                return None
-            return self.own.law(statistic, count)
-        if self.centre.effective(count) <= 0.0:
-            return None
-        return self.centre.law(statistic, count, self.turnover)
-
-
-@dataclass(frozen=True)
 class _Tail:
     """Worst-case p for every value 0 .. len - 1, and the setting that gives it."""
 
@@ -133,17 +117,20 @@ class ScatterWorlds:
         Added to every worst case (Berger & Boos 1994).
     families : int
         Number of families (N without any): strands cannot be more.
+    kin : bool
+        Whether inheritance is one of the routes.
     """
 
     settings: tuple[Setting, ...]
     beta: float
     families: int
+    kin: bool
     _tails: dict[tuple[World, str, int], _Tail] = field(default_factory=dict, repr=False)
 
     @property
-    def contact(self) -> SpreadWorld:
+    def contact(self) -> Setting:
         """Contact-only world at the fitted turnover and recording (for bands and pictures)."""
-        return self.settings[0].centre
+        return self.settings[0]
 
     def compare(self, count: int, *, joins: int, strands: int) -> tuple[Comparison, ...]:
         """Compare a motif with both worlds.
@@ -191,10 +178,9 @@ class ScatterWorlds:
             return Comparison(world, statistic, direction, value, nan, nan, nan, first, None, note)
         k = int(tail.worst[min(value, len(tail.p) - 1)])
         setting, law = tail.settings[k], tail.laws[k]
-        extreme = min(count, self.families) if direction == "many" else 0
-        extreme = max(extreme, value) if direction == "many" else min(extreme, value)
+        extreme = max(min(count, self.families), value) if direction == "many" else 0
         said = [f"worst case at turnover {setting.turnover:.4g}"]
-        if world == "transmission" and self.families < setting.centre.model.graph.n:
+        if world == "transmission" and self.kin:
             said.append(f"inheritance share {setting.inheritance:g}")
         if np.isfinite(setting.kappa):
             said.append(f"recording rate {setting.kappa:.4g}")
@@ -242,13 +228,14 @@ def scatter_worlds(
     *,
     largest: int,
     pool: Pool | None = None,
+    use_cache: bool = False,
 ) -> ScatterWorlds:
     """Walk the worlds without a second invention.
 
     One world is walked for each inheritance share and recording, at the fitted turnover; the other
     turnovers of the confidence set reuse its walks by reweighting, count by count, and are walked
     themselves only where less than a quarter of the effective draws would be left. The law of a
-    count depends on no other count.
+    count depends on no other count. Only laws are kept, never walks.
 
     Parameters
     ----------
@@ -259,46 +246,103 @@ def scatter_worlds(
     largest : int
         The catalogue's largest count, whatever is asked for.
     pool : Pool or None
+    use_cache : bool
+        Whether finished worlds are kept on disk and read from there.
     """
     wanted = np.unique(np.asarray(counts, dtype=np.int32))
     settings = []
     for share in what.shares:
         for point in what.confidence.points:
-            settings += _settings(what, share, point, wanted, largest, pool)
+            settings += _settings(_Walks(what, share, point, wanted, largest, pool), use_cache)
     first = what.confidence.points[0]
     settings.sort(key=lambda s: (s.inheritance, s.kappa != first.kappa, s.turnover != first.centre))
-    families = len(np.unique(what.family)) if what.family is not None else what.graph.n
-    return ScatterWorlds(tuple(settings), what.confidence.beta, families)
+    families = what.graph.n if what.family is None else len(np.unique(what.family))
+    return ScatterWorlds(
+        tuple(settings), what.confidence.beta, families, kin=what.family is not None
+    )
 
 
-def _settings(  # noqa: PLR0917
-    what: Transmission,
-    share: float,
-    point: Point,
-    wanted: IntArray,
-    largest: int,
-    pool: Pool | None,
-) -> list[Setting]:
-    """Walk one share and recording: the centre, then whatever reweighting cannot reach."""
+@dataclass(frozen=True)
+class _Walks:
+    """One inheritance share and recording: what is walked for it."""
 
-    def walk(turnover: float, counts: IntArray) -> SpreadWorld:
+    what: Transmission
+    share: float
+    point: Point
+    counts: IntArray
+    largest: int
+    pool: Pool | None
+
+    @property
+    def walks(self) -> int:
+        """Walks of this world."""
+        first = self.share == 0.0 and self.point is self.what.confidence.points[0]
+        return self.what.walks if first else max(100, round(BESIDE * self.what.walks))
+
+    def walk(self, turnover: float, counts: IntArray) -> SpreadWorld:
+        """Walk at one turnover."""
         return spread_world(
-            what.model(share, point, turnover),
+            self.what.model(self.share, self.point, turnover),
             counts,
-            largest=largest,
-            walks=what.walks,
-            seed=what.seed,
-            pool=pool,
+            largest=self.largest,
+            walks=self.walks,
+            seed=self.what.seed,
+            pool=self.pool,
         )
 
-    centre = walk(point.centre, wanted)
+    def depends_on(self) -> dict[str, object]:
+        """Everything the laws are made of, for the cache's key."""
+        model = self.what.model(self.share, self.point, self.point.centre)
+        own = {f.name: getattr(model, f.name) for f in fields(model)}
+        del own["graph"], own["family"]
+        return {
+            **own,
+            "work": "scatter",
+            "traditions": model.graph.n,
+            "edges": model.graph.edges,
+            "family_codes": model.family_codes,
+            "turnovers": self.point.turnovers,
+            "counts": self.counts,
+            "largest": self.largest,
+            "walks": self.walks,
+            "seed": self.what.seed,
+            "design": (KEEP, KEPT, GROWTH),
+        }
+
+
+def _settings(walks: _Walks, use_cache: bool) -> list[Setting]:
+    """Laws at every turnover of one share and recording, from the cache where they are there."""
+    entry = open_entry(walks.depends_on()) if use_cache else None
+    found = entry.read("laws") if entry is not None else None
+    if found is not None:
+        return unpacked(found, walks.share, walks.point)
+    made = _walked(walks)
+    if entry is not None:
+        entry.write("laws", packed(made))
+        entry.finish()
+    return made
+
+
+def _walked(walks: _Walks) -> list[Setting]:
+    """Walk the centre, then whatever reweighting cannot reach."""
+    centre = walks.walk(walks.point.centre, walks.counts)
     out = []
-    for turnover in point.turnovers:
+    for turnover in walks.point.turnovers:
         lost = [
-            c for c in wanted.tolist() if centre.effective(c, turnover) < KEEP * centre.effective(c)
+            c
+            for c in walks.counts.tolist()
+            if centre.effective(c, turnover) < KEEP * centre.effective(c)
         ]
-        own = walk(turnover, np.array(lost, dtype=np.int32)) if lost else None
-        out.append(Setting(share, point.kappa, turnover, centre, own))
+        own = walks.walk(turnover, np.array(lost, dtype=np.int32)) if lost else None
+        laws: dict[tuple[str, int], Law] = {}
+        for count in walks.counts.tolist():
+            here = own is not None and count in lost
+            world = own if own is not None and here else centre
+            if world.effective(count) <= 0.0:
+                continue
+            made = world.laws(KEPT, count, None if here else turnover)
+            laws |= {(name, count): law for name, law in zip(KEPT, made, strict=True)}
+        out.append(Setting(walks.share, walks.point.kappa, turnover, laws, frozenset(lost)))
     return out
 
 

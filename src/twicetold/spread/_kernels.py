@@ -77,40 +77,46 @@ def two_below(state, a, b):  # type: ignore[no-untyped-def]
 
 
 @nb.njit(nogil=True, cache=True, inline="always")
-def pick_contact(state, m, holders, held, indptr, indices, max_degree, onward):  # type: ignore[no-untyped-def]
+def pick_contact(state, m, order, held, indptr, indices, max_degree, onward):  # type: ignore[no-untyped-def]
     """Non-holder reached across a uniformly chosen boundary edge, then carried onward; -1 if none.
 
-    Blind tries pick a holder and one of ``max_degree`` edge numbers and are taken again when that
-    edge does not exist or ends on a holder; so every boundary edge is equally likely. Only when
+    ``order`` lists the m holders first, then the others. Blind tries pick a tradition of the
+    smaller side and one of ``max_degree`` edge numbers and are taken again when that edge does not
+    exist or does not end on the other side; so every boundary edge is equally likely. Only when
     they all fail are the boundary edges counted, which also tells whether there are any.
     """
+    n = len(order)
+    outside = 2 * m > n
+    base = m if outside else 0
+    size = n - m if outside else m
+    far = 1 if outside else 0
     found = np.int64(-1)
     last_edge = len(indices) - 1
-    for _ in range(TRIES):
-        h, k = two_below(state, m, max_degree)
-        j = holders[h]
+    for _ in range(TRIES if size > 0 else 0):
+        h, k = two_below(state, size, max_degree)
+        j = order[base + h]
         start = indptr[j]
         exists = k < indptr[j + 1] - start
         # Read some edge in any case: one unpredictable branch instead of two.
         v = indices[min(start + k * exists, last_edge)] if last_edge >= 0 else 0
-        if exists and held[v] == 0:
-            found = np.int64(v)
+        if exists and held[v] == far:
+            found = np.int64(j) if outside else np.int64(v)
             break
     if found < 0:
         boundary = 0
-        for h in range(m):
-            j = holders[h]
+        for h in range(base, base + size):
+            j = order[h]
             for k in range(indptr[j], indptr[j + 1]):
-                boundary += 1 - held[indices[k]]
+                boundary += 1 if held[indices[k]] == far else 0
         if boundary == 0:
             return found
         skip = next_below(state, boundary)
-        for h in range(m):
-            j = holders[h]
+        for h in range(base, base + size):
+            j = order[h]
             for k in range(indptr[j], indptr[j + 1]):
-                if held[indices[k]] == 0:
+                if held[indices[k]] == far:
                     if skip == 0:
-                        found = np.int64(indices[k])
+                        found = np.int64(j) if outside else np.int64(indices[k])
                     skip -= 1
             if skip < 0:
                 break
@@ -158,7 +164,8 @@ def walk_kernel(  # type: ignore[no-untyped-def]
     n_words = bits.shape[2]
     state = np.zeros(4, dtype=np.uint64)
     held = np.zeros(n, dtype=np.uint8)
-    holders = np.zeros(n, dtype=np.int32)
+    # Holders stand first in `order`, the others behind them.
+    order = np.zeros(n, dtype=np.int32)
     position = np.zeros(n, dtype=np.int32)
     recorded = np.ones(n, dtype=np.uint8)
     current = np.zeros(n_words, dtype=np.uint64)
@@ -179,6 +186,9 @@ def walk_kernel(  # type: ignore[no-untyped-def]
                 member_position[members[k]] = k
             for f in range(len(free)):
                 free[f] = family_start[f + 1] - family_start[f]
+        for i in range(n):
+            order[i] = i
+            position[i] = i
         m = 0
         seen = 0
         before = True
@@ -191,18 +201,20 @@ def walk_kernel(  # type: ignore[no-untyped-def]
             if gained >= 0:
                 # A gain: `gained` becomes a holder.
                 held[gained] = 1
-                holders[m] = gained
-                position[gained] = m
-                m += 1
                 moved = gained
+                spot = m
+                m += 1
             else:
                 # A loss, from a uniformly chosen holder.
-                moved = holders[next_below(state, m)]
+                moved = np.int64(order[next_below(state, m)])
                 m -= 1
+                spot = m
                 held[moved] = 0
-                last = holders[m]
-                holders[position[moved]] = last
-                position[last] = position[moved]
+            swapped = order[spot]
+            order[position[moved]] = swapped
+            position[swapped] = position[moved]
+            order[spot] = moved
+            position[moved] = spot
             if recorded[moved] == 1:
                 seen += 1 if gained >= 0 else -1
                 current[moved >> 6] ^= np.uint64(1) << np.uint64(moved & 63)
@@ -251,19 +263,19 @@ def walk_kernel(  # type: ignore[no-untyped-def]
             by_kin = kin and route >= until_contact
             by_contact = not by_kin and route >= until_emergence
             if by_contact:
-                gained = pick_contact(state, m, holders, held, indptr, indices, max_degree, onward)
+                gained = pick_contact(state, m, order, held, indptr, indices, max_degree, onward)
                 if gained >= 0:
                     carried += 1
                 elif spill:
                     by_kin = kin
             if by_kin:
-                f = family[holders[next_below(state, m)]]
+                f = family[order[next_below(state, m)]]
                 if free[f] > 0:
                     gained = np.int64(members[family_start[f] + next_below(state, free[f])])
                     inherited += 1
                 elif spill and route >= until_contact:
                     gained = pick_contact(
-                        state, m, holders, held, indptr, indices, max_degree, onward
+                        state, m, order, held, indptr, indices, max_degree, onward
                     )
                     if gained >= 0:
                         carried += 1

@@ -47,29 +47,30 @@ def two_below(stream: PlainStream, a: int, b: int) -> tuple[int, int]:
 
 
 def pick_contact(
-    stream: PlainStream, holders: list[int], neighbours: list[list[int]], onward: float
+    stream: PlainStream, m: int, order: list[int], neighbours: list[list[int]], onward: float
 ) -> int | None:
     """Non-holder across a uniformly chosen boundary edge, carried on a geometric number of steps.
 
-    None without boundary edges.
-
-    Every further step goes to a uniformly chosen neighbour; the gain falls to the last non-holder
-    the walk stood on.
+    ``order`` lists the m holders, then the others. None without boundary edges. Every further step
+    goes to a uniformly chosen neighbour; the gain falls to the last non-holder the walk stood on.
     """
-    held = set(holders)
+    held = set(order[:m])
+    outside = 2 * m > len(order)
+    side = order[m:] if outside else order[:m]
     most = max(1, *(len(near) for near in neighbours))
-    found = -1
-    for _ in range(TRIES):
-        h, k = two_below(stream, len(holders), most)
-        near = neighbours[holders[h]]
-        if k < len(near) and near[k] not in held:
-            found = near[k]
+    edges = [(j, v) for j in side for v in neighbours[j] if (v in held) == outside]
+    chosen = None
+    for _ in range(TRIES if side else 0):
+        h, k = two_below(stream, len(side), most)
+        near = neighbours[side[h]]
+        if k < len(near) and (near[k] in held) == outside:
+            chosen = (side[h], near[k])
             break
-    if found < 0:
-        boundary = [v for j in holders for v in neighbours[j] if v not in held]
-        if not boundary:
+    if chosen is None:
+        if not edges:
             return None
-        found = boundary[stream.below(len(boundary))]
+        chosen = edges[stream.below(len(edges))]
+    found = chosen[0] if outside else chosen[1]
     place = found
     while onward > 0.0 and stream.double() < onward:
         place = neighbours[place][stream.below(len(neighbours[place]))]
@@ -137,15 +138,15 @@ def _one_walk(
     kin = _Kin(t.family.tolist(), t.family_start.tolist(), t.family_members.tolist())
     kept: dict[int, _Visit] = {}
     routes, below_full, before = [0, 0, 0], 0, True
-    holders = [stream.below(t.n)]
+    order, m = list(range(t.n)), 1
+    _swap(order, stream.below(t.n), 0)
     if with_kin:
-        kin.gain(holders[0])
-    while holders:
-        m = len(holders)
+        kin.gain(order[0])
+    while m:
         before = before and m < t.cap
         below_full += m < t.n
         toss = stream.double()
-        seen = recorded & set(holders)
+        seen = recorded & set(order[:m])
         if len(seen) in slot_of:
             slot = slot_of[len(seen)]
             if before:
@@ -158,24 +159,30 @@ def _one_walk(
             elif slot in kept:
                 kept[slot] = (float(total), *kept[slot][1:])
         if stream.double() >= (t.up_before[m] if before else t.up_after[m]):
-            at = stream.below(m)
-            lost = holders[at]
-            holders[at] = holders[-1]
-            holders.pop()
+            lost = order[stream.below(m)]
+            m -= 1
+            _swap(order, lost, m)
             if with_kin:
                 kin.lose(lost)
             continue
-        gained = _gain(t, stream, holders, kin, neighbours, cumulative, routes)
-        holders.append(gained)
+        gained = _gain(t, stream, m, order, kin, neighbours, cumulative, routes)
+        _swap(order, gained, m)
+        m += 1
         if with_kin:
             kin.gain(gained)
     return kept
 
 
+def _swap(order: list[int], who: int, spot: int) -> None:
+    here = order.index(who)
+    order[here], order[spot] = order[spot], order[here]
+
+
 def _gain(  # noqa: PLR0917
     t: ChainTables,
     stream: PlainStream,
-    holders: list[int],
+    m: int,
+    order: list[int],
     kin: _Kin,
     neighbours: list[list[int]],
     cumulative: list[float],
@@ -184,17 +191,17 @@ def _gain(  # noqa: PLR0917
     """Who gains the motif next; counts the realised route in ``routes``."""
     emergence, contact, inheritance = t.shares
     route = stream.double()
-    held = set(holders)
+    held = set(order[:m])
     by_kin = inheritance > 0.0 and route >= emergence + contact
     by_contact = not by_kin and route >= emergence
 
     def told() -> int | None:
-        gained = pick_contact(stream, holders, neighbours, t.onward)
+        gained = pick_contact(stream, m, order, neighbours, t.onward)
         routes[1] += gained is not None
         return gained
 
     def inherited() -> int | None:
-        free = kin.free[kin.family[holders[stream.below(len(holders))]]]
+        free = kin.free[kin.family[order[stream.below(m)]]]
         if not free:
             return None
         routes[2] += 1

@@ -55,7 +55,7 @@ def rate_plain(
         which = stream.double() * total
         gain = which < contact * boundary + spontaneous * (n - m)
         if which < contact * boundary:
-            across = pick_contact(stream, holders, neighbours, 0.0)
+            across = pick_contact(stream, m, order, neighbours, 0.0)
             assert across is not None  # a contact only happens across a boundary edge
             moved = across
         elif gain:

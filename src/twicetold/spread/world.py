@@ -122,21 +122,34 @@ class SpreadWorld:
         SpreadError
             When the count was not asked for, or no walk ever visited it.
         """
+        return self.laws((statistic,), count, turnover)[0]
+
+    def laws(
+        self, statistics: Sequence[str], count: int, turnover: float | None = None
+    ) -> list[Law]:
+        """Laws of several statistics given the recorded count; see :meth:`law`."""
         weight = self.weights(count, turnover)
         there = weight > 0.0
         if not there.any():
             raise SpreadError(
                 f"No walk came by {count} recorded holders; ask for more walks or check `recorded`."
             )
-        values = self.statistics[: len(weight), self.slot(count), STATISTICS.index(statistic)]
-        distinct, where = np.unique(values[there], return_inverse=True)
-        sums = np.bincount(where, weights=weight[there])
-        return Law(
-            values=distinct.astype(np.int64),
-            weights=sums / sums.sum() * len(weight),
-            draws=len(weight),
-            effective=effective_size(weight),
-        )
+        kept, effective, out = weight[there], effective_size(weight), []
+        for statistic in statistics:
+            column = STATISTICS.index(statistic)
+            values = self.statistics[: len(weight), self.slot(count), column][there]
+            sums = np.bincount(values, weights=kept)
+            distinct = np.flatnonzero(sums > 0.0)
+            weights = sums[distinct]
+            out.append(
+                Law(
+                    values=distinct.astype(np.int64),
+                    weights=weights / weights.sum() * len(weight),
+                    draws=len(weight),
+                    effective=effective,
+                )
+            )
+        return out
 
     def band(self, statistic: str, level: float = 0.95) -> IntArray:
         """(K, 3) low, median and high of a statistic at each count; -1 where never visited."""

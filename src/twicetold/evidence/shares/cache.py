@@ -153,7 +153,7 @@ def kernel_version() -> str:
             here / f"{name}.py"
             for name in ("_network_kernels", "features", "network", "posterior", "heldout")
         ),
-        *(Path(spread.__file__).parent / f"{name}.py" for name in ("_kernels", "chain")),
+        *(Path(spread.__file__).parent / f"{name}.py" for name in ("_kernels", "chain", "world")),
         *(package / f"{name}.py" for name in ("_sfc64", "randomness")),
     ]
     digest = hashlib.sha256(f"{np.__version__} {numba.__version__}".encode())
