@@ -117,3 +117,15 @@ def test_impossible_counts_are_refused(world):
         covariate_propensity(held[:3], frame.iloc[:3], effort[:3], surveyed[:3])
     with pytest.raises(PropensityError, match="one entry per tradition"):
         covariate_propensity(held[:3], frame, effort, surveyed)
+
+
+def test_a_large_catalogue_settles_too(world):
+    # Fifty thousand motifs: the deviance is so large that its last digits never come to rest.
+    frame, effort, rate, _, _ = world
+    surveyed = np.full(300, 50_000)
+    held = np.random.default_rng(8).binomial(surveyed, 1 - np.exp(-rate / 20))
+    fit = covariate_propensity(held, frame, effort, surveyed)
+    assert np.all(np.abs(fit.coefficients[1:] - [0.001, -0.7]) < 4 * fit.se[1:])
+    # A line of altitude that other things than altitude follow: the fit is far from exact.
+    rough = np.random.default_rng(9).binomial(surveyed, 1 - np.exp(-(rate**0.7) / 20))
+    assert covariate_propensity(rough, frame, effort, surveyed).dispersion > 10
