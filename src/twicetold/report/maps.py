@@ -320,7 +320,8 @@ def _drawn(
     lon, lat = catalogue.longitude, catalogue.latitude
     if step <= 0:
         return np.round(lon, 4), np.round(lat, 4)
-    lon, lat = np.round(lon / step) * step, np.round(lat / step) * step
+    lon = (np.round(lon / step) * step + 180.0) % 360.0 - 180.0
+    lat = np.round(lat / step) * step
     cells = np.rint(lon / step).tolist(), np.rint(lat / step).tolist()
     spots: dict[tuple[float, float], list[int]] = {}
     for i, spot in enumerate(zip(*cells, strict=True)):

@@ -2,10 +2,12 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass
 
 import numpy as np
+import numpy.typing as npt
 
 from twicetold import __version__
 from twicetold.catalogue import Catalogue
@@ -236,16 +238,29 @@ def sensitivity_table(published: Published, name: str, rows: Rows) -> Table:
         at = header.index("motif_id")
         allowed = _listed(published) - published.small
         body = [row for row in body if row[at] in allowed]
-    if "tradition_id" in header:
-        at = header.index("tradition_id")
-        c = published.catalogue
-        named = {c.tradition_ids[i] for i in np.flatnonzero(open_traditions(c)).tolist()}
-        body = [row for row in body if row[at] in named]
+    if hidden := protected_words(published.catalogue):
+        body = [row for row in body if hidden.isdisjoint(row)]
     title = _TITLES.get(name, f"{name[:1].upper()}{name[1:].replace('_', ' ')} of the run.")
     motif_rows = header.count("motif_id") and len({r[header.index("motif_id")] for r in body})
     key = ("motif_id",) if body and motif_rows == len(body) else ()
     refers = (("motif_id", "S1_motifs", "motif_id"),) if "motif_id" in header else ()
     return table(f"S4_{name}", title, header, body, key=key, references=refers)
+
+
+def protected_words(c: Catalogue) -> frozenset[str]:
+    """Ids, names, families, regions and labels that only restricted rows have."""
+    shown = open_traditions(c)
+    closed = [access == "restricted" for access in c.motif_access]
+
+    def words(mask: npt.NDArray[np.bool_], motifs: list[bool]) -> set[str]:
+        found: set[str] = set()
+        for values in (c.tradition_ids, c.tradition_names, c.family, c.branch, c.region):
+            found.update(values[i] for i in np.flatnonzero(mask).tolist())
+        for values in (c.motif_ids, c.motif_names, c.motif_categories):
+            found.update(v for v, chosen in zip(values, motifs, strict=True) if chosen)
+        return found - {""}
+
+    return frozenset(words(~shown, closed) - words(shown, [not x for x in closed]))
 
 
 def plan_table(plan: Plan) -> Table:
@@ -292,10 +307,16 @@ def provenance_table(published: Published) -> Table:
         rows.append((f"input {source.get('name', '')} sha256", str(source.get("sha256", ""))))
     rows += [(f"version {k}", str(v)) for k, v in record.get("versions", {}).items()]
     rows += _flat("fit", record.get("fits", {}))
-    rows += [(f"note {k}", str(n)) for k, n in enumerate(record.get("notes", []), 1)]
+    notes = [str(n) for n in record.get("notes", []) if not _names_any(str(n), protected_words(c))]
+    rows += [(f"note {k}", n) for k, n in enumerate(notes, 1)]
     rows = [row for row in rows if row[1]]
     title = "Where the numbers come from."
     return table("S5_provenance", title, ("item", "value"), rows, key=("item",))
+
+
+def _names_any(text: str, words: frozenset[str]) -> bool:
+    """Whether a text holds one of the words as a word of its own."""
+    return any(re.search(rf"(?<!\w){re.escape(w)}(?!\w)", text) for w in words)
 
 
 def _few(n: int) -> str:
