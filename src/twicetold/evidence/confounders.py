@@ -8,6 +8,9 @@ from typing import TYPE_CHECKING, Any
 
 import pandas as pd
 
+from twicetold.evidence.categories import Categories, categories
+from twicetold.evidence.needed import joins_needed
+from twicetold.evidence.pairs import companions
 from twicetold.evidence.stability import Stability, stability
 from twicetold.evidence.study import Study
 from twicetold.evidence.unmeasured import unmeasured
@@ -67,11 +70,18 @@ def confounders(
     held = Stability()
     if study.plan.sensitivity.stability:
         held = stability(study, worlds, table, pool, cache=cache)
+    plan = study.plan
+    told = "emergence" in plan.evidence.worlds
+    whole = len(observed.index) == study.catalogue.n_motifs
+    kinds = categories(table, plan) if told and whole else Categories()
+    beside = companions(study.catalogue, observed.index, alpha=plan.evidence.alpha, pool=pool)
     parts: dict[int, dict[str, Any]] = {m: {} for m in observed.index}
     for motif, bound in hidden.bounds.items():
         parts[motif]["hidden_bound"] = bound
     for motif, frame in held.by_motif.items():
         parts[motif]["stability"] = frame
+    for motif, frame in beside.by_motif.items():
+        parts[motif]["pairs"] = frame
     columns = {
         "hidden_bound": {m: bound["log_sd"] for m, bound in hidden.bounds.items()},
         "stability": held.share,
@@ -80,10 +90,13 @@ def confounders(
         "hidden": hidden.by_motif,
         "hidden_lengths": hidden.by_length,
         "stability_runs": held.runs,
+        "category_pairs": kinds.pairs,
+        "needed": joins_needed(study, pool) if told else None,
     }
     return Confounders(
         parts=parts,
         columns={name: values for name, values in columns.items() if values},
+        categories=kinds.frame,
         tables={name: frame for name, frame in tables.items() if frame is not None},
-        notes=(*hidden.notes, *held.notes),
+        notes=(*hidden.notes, *held.notes, *beside.notes),
     )
