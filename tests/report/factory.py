@@ -486,3 +486,15 @@ def make_ranking(n=80, motifs=40, *, rich=True, seed=3, world=False) -> Ranking:
     return Ranking(
         catalogue, graph, plan, table, evidence, bands, prevalence, fits, categories, tables, notes
     )
+
+
+def alone(ranking: Ranking, motif_id: str) -> Ranking:
+    """The same results for one motif only, as a test of one motif gives."""
+    own = next(e for e in ranking.evidence if e.motif_id == motif_id)
+    table = ranking.motifs[ranking.motifs["motif_id"] == motif_id]
+    return dataclasses.replace(ranking, motifs=table, evidence=(own,))
+
+
+def with_plan(ranking: Ranking, **changes) -> Ranking:
+    """The same results under another plan (they are not computed again)."""
+    return dataclasses.replace(ranking, plan=ranking.plan.replace(**changes))

@@ -41,7 +41,7 @@ def test_every_figure_of_a_motif_is_a_valid_chart(rich, kind):
 def test_results_give_figures_themselves(rich):
     own = next(e for e in rich.evidence if e.motif_id == "m008")
     wanted = figure(rich, "correlogram", motif="m008").to_dict()
-    assert own.figure("correlogram").to_dict() == wanted
+    assert own.figure("correlogram", ranking=rich).to_dict() == wanted
     assert rich.figure("correlogram", motif="m008").to_dict() == wanted
     assert isinstance(own.figure("map", ranking=rich), alt.TopLevelMixin)
 
