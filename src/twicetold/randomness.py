@@ -44,4 +44,4 @@ def chunk_generator(seed: int, what: Stream, *chunk: int) -> np.random.Generator
 def chunk_words(seed: int, what: Stream, *chunk: int, draws: int) -> npt.NDArray[np.uint64]:
     """(draws, 3) uint64: the three seeding words of an SFC64 generator for each draw of a chunk."""
     words = chunk_sequence(seed, what, *chunk).generate_state(3 * draws, np.uint64)
-    return words.reshape(draws, 3)
+    return words.reshape(draws, 3).astype(np.uint64, copy=False)

@@ -95,7 +95,7 @@ class Ground:
             self.group.graph,
             self.confidence,
             family=self.group.family_codes if study.families else None,
-            propensity=self.propensity,
+            propensity=invention_rates(study, self),
             reach=study.plan.spread.reach,
             walks=study.plan.evidence.walks,
             seed=study.plan.evidence.seed,
@@ -108,10 +108,26 @@ class Ground:
             self.group.graph,
             point.centre,
             family=self.group.family_codes if study.families else None,
-            propensity=self.propensity,
+            propensity=invention_rates(study, self),
             reach=study.plan.spread.reach,
             recorded=point.recorded,
         )
+
+
+def invention_rates(study: Study, ground: Ground) -> npt.NDArray[np.float64]:
+    """(N,) rates at which motifs emerge in the spread chain.
+
+    The plan's propensity says how readily a tradition *shows* a motif, so it holds what was
+    collected there. Where the chain has recording of its own, that part is taken out again, or
+    effort would count twice: effort and row totals are all recording, a covariate fit has effort
+    as its offset.
+    """
+    rule, propensity = study.plan.emergence.propensity, ground.propensity
+    if ground.confidence.points and ground.confidence.points[0].recorded is None:
+        return propensity
+    if rule == "covariates" and study.catalogue.effort is not None:
+        return propensity / study.catalogue.effort[ground.group.traditions]
+    return np.ones(ground.group.n)
 
 
 def against_spread(

@@ -6,6 +6,7 @@ import math
 from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
+    from twicetold.evidence.power import PowerTable
     from twicetold.evidence.results import MotifEvidence, Ranking
 
 STATISTIC_WORDS = {
@@ -80,4 +81,27 @@ def tell(ranking: Ranking, evidence: MotifEvidence) -> str:
         lines.append("")
     lines += [f"Note: {note}" for note in ranking.notes]
     lines.append(CAUTION)
+    return "\n".join(lines)
+
+
+def tell_power(table: PowerTable) -> str:
+    """Say how often each verdict would come out, in a table of plain text."""
+    lines = [
+        f"Motifs simulated on this map at a turnover of {table.turnover:.4g} and judged one at a "
+        f"time at the level {table.alpha:g}.",
+        "How often each verdict came out, in per cent:",
+    ]
+    for truth, part in table.frame.groupby("truth", sort=False):
+        wide = part.pivot_table(index="holders", columns="verdict", values="probability")
+        shown = [v for v in dict.fromkeys(part["verdict"]) if (wide[v] > 0).any()]
+        lines += ["", f"If the truth is {truth}:"]
+        lines.append(f"{'holders':>9}  " + "  ".join(shown))
+        for n, row in wide.iterrows():
+            cells = "  ".join(f"{100 * row[v]:>{len(v)}.0f}" for v in shown)
+            lines.append(f"{n:>9}  {cells}")
+    lines += ["", "Fewest holders with 80 % power:"]
+    for found in table.smallest.to_dict("records"):
+        fewest = float(found["holders"])
+        n = "more than were looked at" if math.isnan(fewest) else f"{fewest:.0f}"
+        lines.append(f"  {found['truth']} seen as {found['verdict']}: {n}")
     return "\n".join(lines)
