@@ -12,7 +12,7 @@ import twicetold
 HOME = Path(twicetold.__file__).parent
 LAYERS = ("catalogue", "graph", "statistics", "references", "spread", "evidence", "report")
 # Single modules that every layer may use: they import nothing of the layers themselves.
-PLAIN = {"errors", "randomness", "workers", "folders", "display", "_sfc64"}
+PLAIN = {"errors", "randomness", "workers", "folders", "display", "_sfc64", "_compiled"}
 # The plan takes the reading rules from the catalogue; the layers below inference never see it.
 PLAN = {"plan": ("evidence", "report")}
 # Nothing of the commands is imported by any layer.

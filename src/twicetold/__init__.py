@@ -10,6 +10,8 @@ from __future__ import annotations
 import importlib
 from typing import TYPE_CHECKING, Any
 
+from twicetold._compiled import keep_kernels_somewhere
+
 __version__ = "0.1.0"
 
 _HOMES = {
@@ -46,6 +48,9 @@ if TYPE_CHECKING:
     from twicetold.evidence import rank_catalogue, test_motif
     from twicetold.graph import ContactGraph, contact_graph
     from twicetold.plan import Plan, read_plan
+
+
+keep_kernels_somewhere()
 
 
 def __getattr__(name: str) -> Any:
