@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import ast
+import re
 from pathlib import Path
 
 import pytest
@@ -75,3 +76,11 @@ def test_the_report_computes_no_statistic():
     for path in (HOME / "report").rglob("*.py"):
         used = {m for m in imported_modules(path) if m.startswith(below)}
         assert used <= {"twicetold.references.law"}, path
+
+
+def test_tests_share_code_by_modules_with_names_of_their_own():
+    # Which ``conftest`` an import would find hangs on the order of the folders.
+    tests = list(Path(__file__).parent.rglob("*.py"))
+    assert not [p for p in tests if re.search(r"^(from|import) conftest", p.read_text(), re.M)]
+    names = [p.name for p in tests if p.name != "conftest.py"]
+    assert len(names) == len(set(names))

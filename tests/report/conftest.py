@@ -7,8 +7,6 @@ import pytest
 
 from twicetold.report import write_pages
 
-COMMAND = {"rank": "twicetold rank isles --plan plan.toml --out RUN", "catalogue": "isles"}
-
 
 @pytest.fixture(scope="session")
 def rich():
@@ -23,12 +21,12 @@ def bare():
 @pytest.fixture(scope="session")
 def pages(rich, tmp_path_factory):
     folder = tmp_path_factory.mktemp("pages") / "run"
-    write_pages(rich, folder, command=COMMAND)
+    write_pages(rich, folder, command=factory.COMMAND)
     return folder
 
 
 @pytest.fixture(scope="session")
 def bare_pages(bare, tmp_path_factory):
     folder = tmp_path_factory.mktemp("bare") / "run"
-    write_pages(bare, folder, command=COMMAND)
+    write_pages(bare, folder, command=factory.COMMAND)
     return folder

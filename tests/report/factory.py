@@ -19,6 +19,8 @@ from twicetold.graph.model import ContactGraph
 from twicetold.plan import Plan
 from twicetold.references.law import Law
 
+COMMAND = {"rank": "twicetold rank isles --plan plan.toml --out RUN", "catalogue": "isles"}
+
 ODD_NAMES = (
     "<script>alert(1)</script>",
     "القمر الذي ابتلعه السمك",

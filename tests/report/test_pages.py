@@ -11,8 +11,8 @@ import factory
 import numpy as np
 import pandas as pd
 import pytest
+from factory import COMMAND
 
-from conftest import COMMAND
 from twicetold.report import page_name, write_pages, write_power
 from twicetold.report.common import number, percent, probability
 from twicetold.report.methods import methods
