@@ -34,10 +34,10 @@ from twicetold.workers import Pool
 
 #: Columns and tables that rest on exact distances.
 DISTANCE_COLUMNS = ("hidden_bound", "stability")
-DISTANCE_TABLES = ("S4_stability",)
+DISTANCE_TABLES = ("S4_hidden", "S4_hidden_lengths", "S4_stability", "S4_stability_runs")
 #: Made from records that are no longer there.
 WITHDRAWN_TABLES = ("S4_moved",)
-_MOST_SAID = 10
+_MOST_SAID = 5
 
 
 @dataclass(frozen=True)
@@ -135,50 +135,54 @@ class _Compared:
 
     said: list[str]
     differences: list[str]
-    beyond: int = 0
 
     def table(self, name: str, given: Rows, computed: Rows, *, skip: Sequence[str] = ()) -> None:
         """Compare two tables cell by cell, as text."""
         header, rows = given
-        computed = (computed[0], list(with_infinity(computed[1])))
+        again = list(with_infinity(computed[1]))
         wanted = [c for c in computed[0] if c not in skip]
+        found: list[str] = []
         if [c for c in header if c not in skip] != wanted:
-            self._differ(f"{name}: columns {', '.join(header)}; computed {', '.join(computed[0])}")
-            return
-        if len(rows) != len(computed[1]):
-            self._differ(f"{name}: {len(rows):,} rows; computed {len(computed[1]):,}")
-        pairs = [(header.index(c), computed[0].index(c), c) for c in wanted]
-        for k, (row, new) in enumerate(zip(rows, computed[1], strict=False), 1):
-            if len(row) != len(header):
-                self._differ(f"{name}, row {k}: {len(row)} cells; must have {len(header)}")
-                continue
-            for i, j, column in pairs:
-                if row[i] != new[j]:
-                    which = _named(header, row) or f"row {k}"
-                    self._differ(
-                        f"{name}, {which}, {column}: {row[i] or 'blank'}; "
-                        f"computed {new[j] or 'blank'}"
-                    )
-        left = (
-            f" (not {', '.join(c for c in header if c in skip)})" if set(header) & {*skip} else ""
-        )
-        self.said.append(f"Compared {name}: {len(rows):,} rows, {len(wanted)} columns{left}.")
-
-    def _differ(self, what: str) -> None:
-        if len(self.differences) < _MOST_SAID:
-            self.differences.append(f"Differs: {what}")
+            found.append(f"columns {', '.join(header)}; computed {', '.join(computed[0])}")
         else:
-            self.beyond += 1
+            if len(rows) != len(again):
+                found.append(f"{len(rows):,} rows; computed {len(again):,}")
+            pairs = [(header.index(c), computed[0].index(c), c) for c in wanted]
+            for k, (row, new) in enumerate(zip(rows, again, strict=False), 1):
+                found += _different_cells(header, pairs, k, row, new)
+        self.differences += [f"Differs: {name}, {what}" for what in found[:_MOST_SAID]]
+        if len(found) > _MOST_SAID:
+            self.differences.append(f"and {len(found) - _MOST_SAID:,} more in {name}.")
+        gone = ", ".join(c for c in header if c in skip)
+        left = f" (not {gone})" if gone else ""
+        self.said.append(f"Compared {name}: {len(rows):,} rows, {len(wanted)} columns{left}.")
 
     def lines(self) -> list[str]:
         """Everything said, differences last."""
-        more = [f"and {self.beyond:,} more differences."] if self.beyond else []
-        return [*self.said, *self.differences, *more]
+        return [*self.said, *self.differences]
+
+
+def _different_cells(
+    header: Sequence[str],
+    pairs: Sequence[tuple[int, int, str]],
+    k: int,
+    row: Sequence[str],
+    new: Sequence[str],
+) -> list[str]:
+    """Say where two rows differ; ``pairs`` are places of a column in both, and its name."""
+    which = _named(header, row) or f"row {k}"
+    if len(row) != len(header):
+        return [f"{which}: {len(row)} cells; must have {len(header)}"]
+    return [
+        f"{which}, {column}: {row[i] or 'blank'}; computed {new[j] or 'blank'}"
+        for i, j, column in pairs
+        if row[i] != new[j]
+    ]
 
 
 def _named(header: Sequence[str], row: Sequence[str]) -> str:
     for column, word in (("motif_id", "motif"), ("tradition_id", "tradition")):
-        if column in header:
+        if column in header and len(row) == len(header):
             return f"{word} {row[header.index(column)]}"
     return ""
 
