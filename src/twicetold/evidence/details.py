@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass, field
+from dataclasses import asdict, dataclass, field
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -44,6 +44,8 @@ class Details:
     bands, prevalence, categories : pandas.DataFrame or None
     tables : mapping of str to pandas.DataFrame
     notes : tuple of str
+    fits : mapping of str to object
+        ``graph``: summary of the contact graph.
     """
 
     parts: Mapping[int, Mapping[str, Any]] = field(default_factory=dict)
@@ -53,6 +55,7 @@ class Details:
     categories: pd.DataFrame | None = None
     tables: Mapping[str, pd.DataFrame] = field(default_factory=dict)
     notes: tuple[str, ...] = ()
+    fits: Mapping[str, object] = field(default_factory=dict)
 
     def of(self, motif: int, study: Study) -> Mapping[str, Any]:
         """Give one motif's parts; just its holders where details were not asked for."""
@@ -72,8 +75,10 @@ def motif_details(
     worlds: Worlds,
     table: pd.DataFrame,
     pool: Pool,
+    *,
+    whole: bool = True,
 ) -> Details:
-    """Compute everything the pages show."""
+    """Compute everything the pages show; ``whole`` is False for motifs taken out of a catalogue."""
     parts: dict[int, dict[str, Any]] = {}
     for group in study.groups:
         classes = group_classes(study, group)
@@ -87,13 +92,70 @@ def motif_details(
     beside = confounders(study, observed, worlds, table, pool)
     for motif, more in beside.parts.items():
         parts[motif] |= more
+    tables = dict(beside.tables)
+    categories = beside.categories
+    if worlds.shares and whole:
+        routes = route_table(study, worlds, table)
+        tables["route_shares"] = routes
+        if categories is not None:
+            categories = categories.merge(
+                routes.drop(columns="motifs"), on="category", how="left", validate="1:1"
+            )
+    if worlds.main is not None and whole:
+        from twicetold.evidence.power import at_holders, power_on
+
+        power = power_on(study, *worlds.main, pool)
+        tables["power"], tables["power_smallest"] = power.frame, power.smallest
+        for part in parts.values():
+            part["power"] = at_holders(power, len(part["holders"]))
     return Details(
         parts=parts,
         columns=beside.columns,
-        categories=beside.categories,
-        tables=beside.tables,
+        bands=cluster_bands(study, worlds),
+        prevalence=worlds.prevalence,
+        categories=categories,
+        tables=tables,
         notes=beside.notes,
+        fits={"graph": graph_facts(study)},
     )
+
+
+def graph_facts(study: Study) -> dict[str, object]:
+    """Summary of the contact graph over all located traditions, as plain numbers."""
+    from twicetold.graph import summarise
+
+    return asdict(summarise(study.graph))
+
+
+def route_table(study: Study, worlds: Worlds, table: pd.DataFrame) -> pd.DataFrame:
+    """How the route shares are spread over the catalogue and its categories."""
+    from twicetold.evidence.mixture import catalogue_shares
+
+    category = dict(zip(table["_motif"], table["category"], strict=True))
+    told = sorted(worlds.shares)
+    return catalogue_shares(
+        [worlds.shares[m] for m in told],
+        [str(category[m]) for m in told],
+        seed=study.plan.evidence.seed,
+    )
+
+
+def cluster_bands(study: Study, worlds: Worlds) -> pd.DataFrame | None:
+    """95 % bands of clusters in the emergence-only and contact-only worlds, at each count."""
+    from twicetold.evidence.spreading import main_set
+
+    rows = {}
+    here = study.catalogue.surveyed_of == main_set(study)
+    for motif, comparisons in worlds.comparisons.items():
+        for c in comparisons:
+            if here[motif] and c.world == "emergence" and c.statistic == "clusters" and c.law:
+                n = len(study.catalogue.holders(motif))
+                band = (c.law.quantile(q) for q in (0.025, 0.5, 0.975))
+                rows[n] = ("emergence", n, *band)
+    columns = ["world", "holders", "low", "median", "high"]
+    own = pd.DataFrame([rows[n] for n in sorted(rows)], columns=columns)
+    both = [f for f in (own, worlds.contact_bands) if f is not None and len(f)]
+    return pd.concat(both, ignore_index=True) if both else None
 
 
 def group_classes(study: Study, group: Group) -> DistanceClasses | None:

@@ -47,7 +47,7 @@ HOPED = {
     "a third emergence": "several origins, then spread",
     "emergence": "parallel emergence",
 }
-#: Numbers of holders looked at, where the catalogue reaches so far.
+#: Numbers of holders looked at; the catalogue's own nearest to them.
 COUNTS = (3, 5, 8, 12, 20, 30, 50, 75, 100, 150, 200, 300)
 #: Simulated motifs for each truth and number of holders, and walks they are taken from.
 MOTIFS, WALKS = 400, 2_000
@@ -168,12 +168,23 @@ def catalogue_power(
     pool = pool or ThreadPool()
     study = prepare(catalogue, plan or Plan())
     ground = main_ground(study)
-    largest = int(min(max(ground.counts.max(initial=2), 2), ground.group.n - 1))
-    counts = [n for n in COUNTS if n <= largest] or [largest]
-    judge = make_judge(study, ground, counts, pool, cache=cache)
+    worlds = scatter_worlds(
+        ground.transmission(study),
+        ground.wanted,
+        largest=int(ground.wanted[-1]),
+        pool=pool,
+        use_cache=cache,
+    )
+    return power_on(study, ground, worlds, pool)
+
+
+def power_on(study: Study, ground: Ground, worlds: ScatterWorlds, pool: Pool) -> PowerTable:
+    """Simulate and judge on worlds that are there already, at some of their counts."""
+    counts = some_counts(ground.wanted)
+    judge = make_judge(study, ground, worlds, counts, pool)
     rows = []
     for truth, shares in TRUTHS.items():
-        sets = simulate(study, ground, shares, counts, pool, motifs=MOTIFS)
+        sets = simulate(study, ground, shares, counts, pool)
         flat = [held for n in counts for held in sets[n]]
         said = iter(judge.verdicts(flat, pool))
         for n in counts:
@@ -182,6 +193,12 @@ def catalogue_power(
     frame = pd.DataFrame(rows)
     turnover = float(ground.confidence.points[0].centre)
     return PowerTable(frame, _smallest(frame), study.plan.evidence.alpha, turnover)
+
+
+def some_counts(wanted: npt.NDArray[np.int32]) -> list[int]:
+    """The catalogue's counts nearest to :data:`COUNTS` (in ratio), each once."""
+    near = {int(wanted[np.argmin(np.abs(np.log(wanted / n)))]) for n in COUNTS}
+    return sorted(near)
 
 
 def main_ground(study: Study) -> Ground:
@@ -197,25 +214,27 @@ def main_ground(study: Study) -> Ground:
     ground = prepare_ground(study, group)
     if ground.confidence.refused:
         raise TwicetoldError(ground.confidence.refused)
+    if not len(ground.wanted):
+        raise TwicetoldError(
+            "No motif is held by two traditions or more and not by all: there is nothing whose "
+            "power could be told. Add attestations."
+        )
     return ground
 
 
 def make_judge(
-    study: Study, ground: Ground, counts: Sequence[int], pool: Pool, *, cache: bool
+    study: Study, ground: Ground, worlds: ScatterWorlds, counts: Sequence[int], pool: Pool
 ) -> Judge:
-    """Make the worlds that holder sets of these sizes are judged by."""
-    group, plan = ground.group, study.plan
+    """Make what holder sets of these sizes are judged by."""
+    group = ground.group
     emergence = emergence_world(
         group.graph,
         group.family_codes,
         ground.propensity,
         counts,
         draws=DRAWS,
-        seed=plan.evidence.seed,
+        seed=study.plan.evidence.seed,
         pool=pool,
-    )
-    worlds = scatter_worlds(
-        ground.transmission(study), counts, largest=max(counts), pool=pool, use_cache=cache
     )
     return Judge(study, ground, emergence, worlds)
 
@@ -305,3 +324,11 @@ def _smallest(frame: pd.DataFrame) -> pd.DataFrame:
         n = float(part["holders"].iloc[first]) if first < len(part) else float("nan")
         rows.append({"truth": truth, "verdict": hoped, "holders": n})
     return pd.DataFrame(rows)
+
+
+def at_holders(table: PowerTable, holders: int) -> pd.DataFrame:
+    """Rows of the simulated number of holders nearest (in ratio) to a motif's own."""
+    looked = np.unique(table.frame["holders"].to_numpy(float))
+    near = looked[np.argmin(np.abs(np.log(looked / max(holders, 1))))]
+    here = table.frame["holders"] == near
+    return table.frame.loc[here].reset_index(drop=True)

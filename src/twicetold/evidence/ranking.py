@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
-from typing import Any, Literal
+from typing import TYPE_CHECKING, Any, Literal
 
 import numpy as np
 import pandas as pd
@@ -28,6 +28,10 @@ from twicetold.plan import Plan
 from twicetold.references.multiplicity import adjust, testable
 from twicetold.workers import Pool, ThreadPool
 
+if TYPE_CHECKING:
+    from twicetold.evidence.scatter import ScatterWorlds
+    from twicetold.evidence.spreading import Ground
+
 #: What ``--by`` takes; the first is the default.
 ORDERS = ("evidence", "moran_i", "joins_ratio", "emergence_share", "holders")
 #: Worlds whose primary comparison enters a multiplicity family of its own.
@@ -49,7 +53,7 @@ class Worlds:
     fits, tables : mapping
         See :class:`Ranking`.
     notes : tuple of str
-    prevalence, contact_bands : pandas.DataFrame or None
+    prevalence, contact_bands, main
         See :class:`twicetold.evidence.spreading.SpreadResult`.
     """
 
@@ -61,6 +65,7 @@ class Worlds:
     notes: tuple[str, ...] = ()
     prevalence: pd.DataFrame | None = None
     contact_bands: pd.DataFrame | None = None
+    main: tuple[Ground, ScatterWorlds] | None = None
 
 
 def rank_catalogue(
@@ -135,7 +140,7 @@ def test_motif(
     observed = observe_motifs(study)
     worlds = compute_worlds(study, observed, pool, cache=cache)
     table = judge(study, observed, worlds, (index,), alone=True)
-    extra = motif_details(study, observed, worlds, table, pool)
+    extra = motif_details(study, observed, worlds, table, pool, whole=False)
     for name, values in extra.columns.items():
         table[name] = table["_motif"].map(values)
     ranking = _assemble(study, worlds, ordered(table, "evidence"), extra)
@@ -161,7 +166,7 @@ def compute_worlds(study: Study, observed: ObservedMotifs, pool: Pool, *, cache:
     tables: dict[str, pd.DataFrame] = {}
     shares: Mapping[int, RouteShares] = {}
     power: Mapping[int, tuple[float, float]] = {}
-    prevalence = bands = None
+    prevalence = bands = main = None
     if "emergence" in asked:
         emergence = against_emergence(study, observed, pool)
         parts.append(emergence.comparisons)
@@ -183,12 +188,12 @@ def compute_worlds(study: Study, observed: ObservedMotifs, pool: Pool, *, cache:
         fits |= spread.fits
         tables |= spread.tables
         notes += spread.notes
-        prevalence, bands = spread.prevalence, spread.bands
+        prevalence, bands, main = spread.prevalence, spread.bands, spread.main
     joined = {
         motif: tuple(c for part in parts for c in part.get(motif, ())) for motif in observed.index
     }
     said = tuple(dict.fromkeys(notes))
-    return Worlds(joined, shares, power, fits, tables, said, prevalence, bands)
+    return Worlds(joined, shares, power, fits, tables, said, prevalence, bands, main)
 
 
 def primary(comparisons: Sequence[Comparison], world: str) -> Comparison | None:
@@ -336,7 +341,7 @@ def _assemble(study: Study, worlds: Worlds, table: pd.DataFrame, extra: Details)
         evidence=evidence,
         bands=extra.bands,
         prevalence=extra.prevalence,
-        fits=dict(worlds.fits),
+        fits={**worlds.fits, **extra.fits},
         categories=extra.categories,
         tables={**worlds.tables, **extra.tables},
         notes=(*worlds.notes, *extra.notes),

@@ -49,6 +49,8 @@ class SpreadResult:
         ``world, holders, low, median, high`` clusters in the contact-only world, same set.
     fits, tables, notes
         See :class:`twicetold.evidence.results.Ranking`.
+    main : (Ground, ScatterWorlds) or None
+        Of that same set, for what else is asked of them.
     """
 
     comparisons: Mapping[int, tuple[Comparison, ...]] = field(default_factory=dict)
@@ -59,6 +61,7 @@ class SpreadResult:
     fits: Mapping[str, object] = field(default_factory=dict)
     tables: Mapping[str, pd.DataFrame] = field(default_factory=dict)
     notes: tuple[str, ...] = ()
+    main: tuple[Ground, ScatterWorlds] | None = None
 
 
 @dataclass(frozen=True)
@@ -156,7 +159,7 @@ def against_spread(
     power: dict[int, tuple[float, float]] = {}
     notes: list[str] = []
     main = main_set(study)
-    prevalence = bands = None
+    prevalence = bands = both = None
     fits: dict[str, object] = {}
     tables: dict[str, pd.DataFrame] = {}
     banked = sets_with_banks(study)
@@ -184,7 +187,8 @@ def against_spread(
             )
             _compare(study, group, observed, worlds, comparisons)
             _powers(study, group, worlds, emergence, power)
-            bands = contact_bands(worlds, ground.wanted) if first else bands
+            if first:
+                bands, both = contact_bands(worlds, ground.wanted), (ground, worlds)
         if "shares" in asked and len(ground.wanted):
             if group_set(study, group) in banked:
                 _give_shares(study, ground, pool, cache, shares)
@@ -193,9 +197,8 @@ def against_spread(
                     f"Route shares are given for the {MOST_BANKS} sets of surveyed traditions with "
                     "the most motifs only; each needs a bank of simulated motifs of its own."
                 )
-    return SpreadResult(
-        comparisons, shares, power, prevalence, bands, fits, tables, tuple(dict.fromkeys(notes))
-    )
+    said = tuple(dict.fromkeys(notes))
+    return SpreadResult(comparisons, shares, power, prevalence, bands, fits, tables, said, both)
 
 
 def group_set(study: Study, group: Group) -> int:
