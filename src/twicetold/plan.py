@@ -193,6 +193,9 @@ class SensitivitySection:
         "Other contact graphs.", ("nearest:4", "nearest:5", "nearest:8", "delaunay", "gabriel")
     )
     exponents: tuple[float, ...] = _say("Other effort exponents.", (0.0, 0.5, 1.0))
+    reaches: tuple[float, ...] = _say(
+        "Other mean numbers of steps a contact goes along the graph.", (1.0, 1.5, 3.0)
+    )
     regions: int = _say("Number of regions when the catalogue names none.", 6)
     draws: int = _say("Draws of each sensitivity run.", 9_999)
     hidden: bool = _say("Whether the hidden-propensity bound is computed.", True)
@@ -208,6 +211,8 @@ class SensitivitySection:
             GraphSection(rule=rule).check()
         for exponent in self.exponents:
             between("sensitivity.exponents", exponent, 0.0, 10.0)
+        for reach in self.reaches:
+            between("sensitivity.reaches", reach, 1.0, 100.0)
         between("sensitivity.regions", self.regions, 2, 50)
         between("sensitivity.draws", self.draws, 99, 100_000_000)
         between("sensitivity.hidden_km", self.hidden_km, 0.0, 20_000.0)

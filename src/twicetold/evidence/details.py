@@ -108,6 +108,14 @@ def motif_details(
         tables["power"], tables["power_smallest"] = power.frame, power.smallest
         for part in parts.values():
             part["power"] = at_holders(power, len(part["holders"]))
+    notes = list(beside.notes)
+    if worlds.main is not None and whole and study.plan.sensitivity.stability:
+        from twicetold.evidence.dynamics import dynamics
+
+        other, said = dynamics(study, observed, worlds, pool)
+        notes.append(said)
+        if other is not None:
+            tables["dynamics"] = other.frame
     return Details(
         parts=parts,
         columns=beside.columns,
@@ -115,7 +123,7 @@ def motif_details(
         prevalence=worlds.prevalence,
         categories=categories,
         tables=tables,
-        notes=beside.notes,
+        notes=tuple(notes),
         fits={"graph": graph_facts(study)},
     )
 

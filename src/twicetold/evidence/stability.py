@@ -1,9 +1,10 @@
 """Whether a verdict survives another graph, another propensity, or the loss of a family or region.
 
 Every run is the whole analysis again (worlds, multiplicity, the verdict table), with one thing
-changed and fewer draws. The transmission-only world does not know the propensities, so its p is
-that of the main run wherever only they change; it is walked again, with fewer walks, on other
-graphs; and it is taken over from the main run where a family or a region is left out.
+changed and fewer draws. The transmission-only world is the dear one: it is walked again, with
+fewer walks, on other graphs and reaches only; its p is the main run's where just the propensities change,
+which it does not know wherever recording is fitted; and it is taken over from the main run where
+a family or a region is left out. The tables say which.
 """
 
 from __future__ import annotations
@@ -55,7 +56,7 @@ class Setting:
     Parameters
     ----------
     kind : str
-        ``graph``, ``exponent``, ``propensity``, ``without family`` or ``without region``.
+        ``graph``, ``exponent``, ``propensity``, ``reach``, ``without family`` or ``without region``.
     setting : str
         The other rule, the exponent, or the name left out.
     catalogue : Catalogue
@@ -193,26 +194,57 @@ def settings(study: Study) -> list[Setting]:
         sensitivity__stability=False,
     )
     told = "transmission" in asked
-    carried, same = (CARRIED, SAME) if told else (NOT_ASKED, NOT_ASKED)
+    carried = CARRIED if told else NOT_ASKED
+    same = SAME if told and _blind_to_propensity(plan) else carried
     return [
         *_other_graphs(study, base, AGAIN if told else NOT_ASKED),
         *_other_propensities(study, base, same),
+        *(_other_reaches(study, base) if told else []),
         *_left_out(study, base, carried, "family"),
         *_left_out(study, base, carried, "region"),
     ]
 
 
+def _blind_to_propensity(plan: Plan) -> bool:
+    """Whether the spread chain's worlds are the same under any propensity rule.
+
+    They are where recording is fitted, which takes what was collected out of the propensities
+    (see ``spreading.invention_rates``) and leaves no more but covariates in them.
+    """
+    return plan.spread.recording == "fit" and plan.emergence.propensity != "covariates"
+
+
 def _other_graphs(study: Study, base: Plan, transmission: str) -> list[Setting]:
     if transmission == AGAIN:
-        walks = max(LEAST_WALKS, base.evidence.walks // FEWER_WALKS)
-        base = base.replace(
-            evidence__worlds=(*base.evidence.worlds, "transmission"),
-            evidence__walks=min(walks, base.evidence.walks),
-        )
+        base = _walking(base)
     return [
         Setting("graph", rule, study.catalogue, base.replace(graph__rule=rule), transmission)
         for rule in dict.fromkeys(study.plan.sensitivity.graphs)
         if rule != study.plan.graph.rule
+    ]
+
+
+def _walking(base: Plan) -> Plan:
+    """Let a run walk the transmission-only world again, with fewer walks."""
+    walks = max(LEAST_WALKS, base.evidence.walks // FEWER_WALKS)
+    return base.replace(
+        evidence__worlds=(*base.evidence.worlds, "transmission"),
+        evidence__walks=min(walks, base.evidence.walks),
+    )
+
+
+def _other_reaches(study: Study, base: Plan) -> list[Setting]:
+    """Contact that goes further than the next neighbour."""
+    return [
+        Setting(
+            "reach",
+            f"{reach:g}",
+            study.catalogue,
+            _walking(base).replace(spread__reach=reach),
+            AGAIN,
+        )
+        for reach in dict.fromkeys(study.plan.sensitivity.reaches)
+        if reach != study.plan.spread.reach
     ]
 
 
@@ -299,7 +331,7 @@ def _notes(study: Study) -> tuple[str, ...]:
     if "transmission" in study.plan.evidence.worlds:
         notes.append(
             "In stability runs without a family or a region, p against transmission-only is that "
-            "of the main run; on other graphs it was walked again with fewer walks."
+            "of the main run; on other graphs and reaches it was walked again with fewer walks."
         )
     if study.plan.emergence.propensity == "margins":
         notes.append(
