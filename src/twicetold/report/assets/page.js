@@ -118,6 +118,12 @@
         result.finalize();
         return;
       }
+      /* The plot is one image with one name; nothing inside it is announced. */
+      box.querySelectorAll("[role], [aria-roledescription], [aria-label]").forEach(function (mark) {
+        mark.removeAttribute("role");
+        mark.removeAttribute("aria-roledescription");
+        mark.removeAttribute("aria-label");
+      });
       plot.replaceChildren(box);
       plot.style.minHeight = "";
       entry.result = result;
