@@ -7,6 +7,7 @@ import json
 import math
 import re
 import unicodedata
+from dataclasses import replace
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -43,6 +44,19 @@ def is_restricted(catalogue: Catalogue, motif: int) -> bool:
 def title_name(evidence: MotifEvidence) -> str:
     """What the motif is called in titles."""
     return evidence.name or evidence.motif_id
+
+
+def without_closed_categories(ranking: Ranking) -> Ranking:
+    """The ranking without categories that only restricted motifs have: a name may tell a lot."""
+    table = ranking.categories
+    if (
+        table is None
+        or "category" not in table
+        or "restricted" not in ranking.catalogue.motif_access
+    ):
+        return ranking
+    named = {e.category for e in listed(ranking)}
+    return replace(ranking, categories=table[table["category"].isin(named)].reset_index(drop=True))
 
 
 def page_name(motif_id: str) -> str:

@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING, Any
 
 from twicetold.errors import TwicetoldError
 from twicetold.report import category_charts, maps, motif_charts, overview_charts, shares_charts
-from twicetold.report.common import Spec, is_restricted
+from twicetold.report.common import Spec, is_restricted, without_closed_categories
 from twicetold.report.steady import steady_pdf, steady_svg
 from twicetold.report.theme import config
 
@@ -77,7 +77,7 @@ def specification(
         if motif is None and alone:
             motif = result.evidence[0].motif_id
         if motif is None:
-            spec = _of_ranking(result, kind)
+            spec = _of_ranking(without_closed_categories(result), kind)
         else:
             index = result.catalogue.find_motif(motif)
             found = [e for e in result.evidence if e.index == index]

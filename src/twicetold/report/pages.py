@@ -13,7 +13,14 @@ from markupsafe import Markup
 
 from twicetold import __version__
 from twicetold.report import maps, tables, words
-from twicetold.report.common import Spec, listed, number, page_name, to_json
+from twicetold.report.common import (
+    Spec,
+    listed,
+    number,
+    page_name,
+    to_json,
+    without_closed_categories,
+)
 from twicetold.report.methods import Methods, methods
 from twicetold.report.motif_page import motif_context
 from twicetold.report.run_page import run_context
@@ -73,7 +80,7 @@ class Press:
     """
 
     def __init__(self, ranking: Ranking, folder: Path, command: Mapping[str, str]) -> None:
-        self.ranking = ranking
+        self.ranking = ranking = without_closed_categories(ranking)
         self.folder = Path(folder)
         self.command = dict(command)
         self.atlas = maps.Atlas(ranking.catalogue, ranking.graph, ranking.plan)
