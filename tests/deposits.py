@@ -136,6 +136,12 @@ def deposit() -> Path:
     return out
 
 
+def without_pictures(run: Path) -> Path:
+    """Leave a run's figures out of what follows: drawing them takes most of a deposit's time."""
+    shutil.rmtree(run / "figures")
+    return run
+
+
 @cache
 def restricted_run() -> Path:
     """A run that lets restricted rows in."""

@@ -290,7 +290,9 @@ def _compare_sensitivity(out: _Compared, deposit: _Deposit, computed: Mapping[st
         elif name in computed:
             out.table(name, deposit.tables[name], computed[name])
         elif not deposit.exact:
-            out.said.append(f"Not compared: {name}, which needs exact coordinates.")
+            out.said.append(
+                f"Not compared: {name}, which comes with runs that need exact coordinates."
+            )
         else:
             out.differences.append(f"Differs: {name}: nothing of that name was computed.")
 

@@ -33,6 +33,24 @@ _SHARED = (
     Column("moved", "string", "Whether the verdict is another: yes or no."),
 )
 
+_ROUTES = (
+    *(
+        column
+        for route in ("emergence", "contact", "inheritance")
+        for column in (
+            Column(f"{route}_share", "number", f"Mean share of {route} in the gains of a motif."),
+            Column(f"{route}_share_low", "number", "Lower end of its 90 % interval."),
+            Column(f"{route}_share_high", "number", "Upper end of its 90 % interval."),
+            Column(f"{route}_led", "number", f"Share of motifs of which {route} is the largest."),
+            Column(f"{route}_led_low", "number", "Lower end of its 90 % interval."),
+            Column(f"{route}_led_high", "number", "Upper end of its 90 % interval."),
+        )
+    ),
+    Column("contact_alone", "number", "Share of motifs with nine tenths or more by contact."),
+    Column("contact_alone_low", "number", "Lower end of its 90 % interval."),
+    Column("contact_alone_high", "number", "Upper end of its 90 % interval."),
+)
+
 _BY_TABLE: dict[str, tuple[Column, ...]] = {
     "S2_traditions": (
         Column("name", "string", "Tradition name, as in the catalogue."),
@@ -103,6 +121,80 @@ _BY_TABLE: dict[str, tuple[Column, ...]] = {
         Column("log_sd_three_quarters", "number", "Upper quartile of log_sd over these motifs."),
         Column("ratio_median", "number", "Median of ratio over these motifs."),
         Column("beyond", "integer", "Motifs for which no strength tried would suffice."),
+    ),
+    "S4_stability": (
+        Column("kind", "string", "What was changed in the sensitivity run."),
+        Column("setting", "string", "To what it was changed."),
+        Column("verdict", "string", "Verdict in that run."),
+        Column("transmission", "string", "Where its p against transmission-only comes from."),
+    ),
+    "S4_stability_runs": (
+        Column("draws", "integer", "Draws of the run."),
+        Column("traditions", "integer", "Traditions that took part in the run."),
+        Column("transmission", "string", "Where its p against transmission-only comes from."),
+        Column("motifs", "integer", "Motifs judged in the run."),
+        Column("same_verdict", "number", "Share of these motifs with the same verdict."),
+    ),
+    "S4_dynamics": (
+        Column("p_spread_chain", "number", "P against transmission-only in the spread chain."),
+        Column("p_contact_process", "number", "The same in the rate-based contact process."),
+        Column("verdict_spread_chain", "string", "Verdict by the spread chain."),
+        Column("verdict_contact_process", "string", "Verdict by the contact process."),
+    ),
+    "S4_category_pairs": (
+        Column("other", "string", "The category it is compared with."),
+        Column("motifs", "integer", "Testable motifs of the category."),
+        Column("other_motifs", "integer", "Testable motifs of the other category."),
+        Column("compared", "integer", "Motifs that could be compared at equal holders."),
+        Column("ratio", "number", "Joins ratio of the category over that of the other."),
+        Column("p", "number", "P of so large a difference, categories shuffled at equal holders."),
+        Column("q", "number", "The same, adjusted across pairs (Benjamini-Hochberg)."),
+    ),
+    "S4_needed": (
+        Column("holders", "integer", "Number of holders."),
+        Column("joins_needed", "integer", "Fewest joins that reject emergence alone."),
+        Column("ratio_needed", "number", "joins_needed divided by joins_expected."),
+        Column("p_needed", "number", "P of joins_needed in the emergence-only world."),
+    ),
+    "S4_power": (
+        Column("holders", "integer", "Number of holders."),
+        Column("probability", "number", "Share of simulated motifs that get this verdict."),
+        Column("low", "number", "Lower end of its 95 % interval."),
+        Column("high", "number", "Upper end of its 95 % interval."),
+        Column("motifs", "integer", "Motifs simulated."),
+    ),
+    "S4_power_smallest": (
+        Column("verdict", "string", "The verdict this truth hopes for."),
+        Column(
+            "holders",
+            "integer",
+            "Fewest holders from which on that verdict comes out in 80 % of motifs.",
+        ),
+    ),
+    "S4_turnover_fit": (
+        Column("from_holders", "integer", "Fewest holders of the class."),
+        Column("to_holders", "integer", "Most holders of the class."),
+        Column("observed", "integer", "Motifs in the class."),
+        Column("expected", "number", "Motifs expected there by the fitted prevalence curve."),
+    ),
+    "S4_propensity_fit": (
+        Column("term", "string", "Term of the fit of row totals to covariates."),
+        Column("estimate", "number", "Its coefficient, on the log of the rate."),
+        Column("se", "number", "Standard error."),
+        Column("se_dispersed", "number", "Standard error, widened for overdispersion."),
+        Column("z", "number", "estimate divided by se_dispersed."),
+        Column("rate_ratio", "number", "exp(estimate)."),
+    ),
+    "S4_route_shares": (
+        Column("category", "string", "Category; (all) for the whole catalogue."),
+        Column("motifs_with_shares", "integer", "Motifs whose route shares could be told."),
+        *_ROUTES,
+    ),
+    "S4_categories": (
+        Column("motifs", "integer", "Motifs in the category."),
+        Column("joins_ratio", "number", "All joins of its motifs over all joins expected."),
+        Column("motifs_with_shares", "integer", "Motifs whose route shares could be told."),
+        *_ROUTES,
     ),
     "S4_bands": (
         Column("low", "number", "Lower end of the 95 % band of the number of clusters."),

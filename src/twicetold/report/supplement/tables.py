@@ -34,6 +34,13 @@ _TITLES = {
     "prevalence": "Motifs by number of holders, with the fitted curve.",
     "categories": "Categories of motifs.",
     "propensity_fit": "Fit of the propensities to the covariates.",
+    "power_smallest": "Fewest holders at which the right verdict can be hoped for.",
+    "stability_runs": "The sensitivity runs, and how many verdicts stayed the same in each.",
+    "dynamics": "Verdicts under the rate-based contact process beside the spread chain.",
+    "category_pairs": "Pairs of categories, compared at equal numbers of holders.",
+    "needed": "Joins needed to tell contact or ancestry from emergence, by number of holders.",
+    "turnover_fit": "Fit of the prevalence curve, by classes of holders.",
+    "route_shares": "Shares of the routes over the catalogue and its categories.",
     "power": "What these traditions could show, by number of holders.",
 }
 
