@@ -5,6 +5,7 @@ from __future__ import annotations
 from typing import TYPE_CHECKING, Any
 
 from twicetold.report.common import Spec, known, number, sig
+from twicetold.report.rows import records
 from twicetold.report.theme import light, titled
 
 if TYPE_CHECKING:
@@ -35,7 +36,7 @@ def _category_names(ranking: Ranking) -> list[tuple[str, dict[Any, Any]]]:
     assert ranking.categories is not None
     return [
         (str(r["category"]) if known(r["category"]) else "no category", r)
-        for r in ranking.categories.to_dict("records")
+        for r in records(ranking.categories)
     ]
 
 

@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from twicetold.report.common import Spec, number, percent, plural, probability, sig, title_name
+from twicetold.report.rows import records
 from twicetold.report.theme import STATISTICS, VERDICTS, WORLDS, light, look_of, titled
 
 if TYPE_CHECKING:
@@ -148,7 +149,7 @@ def correlogram_chart(evidence: MotifEvidence, notice: str = "") -> Spec:
     """Share of pairs that both hold the motif, by distance, with the envelope beside it."""
     assert evidence.correlogram is not None
     rows: list[dict[str, Any]] = []
-    for r in evidence.correlogram.to_dict("records"):
+    for r in records(evidence.correlogram):
         row: dict[str, Any] = {
             "d": f"{number(r['from_km'])}–{number(r['to_km'])}",
             "n": number(r["pairs"]),
@@ -257,7 +258,7 @@ def _runs(table: pd.DataFrame, own: str) -> tuple[list[dict[str, Any]], list[str
     rows: list[dict[str, Any]] = []
     kinds: list[str] = []
     count: dict[str, int] = {}
-    for r in table.to_dict("records"):
+    for r in records(table):
         kind = str(r["kind"])
         k = count.get(kind, 0)
         count[kind] = k + 1
@@ -292,7 +293,7 @@ def power_chart(evidence: MotifEvidence, notice: str = "") -> Spec:
             "p": sig(r["probability"], 4),
             "k": order.get(str(r["verdict"]), 9),
         }
-        for r in table.to_dict("records")
+        for r in records(table)
     ]
     present = [v for v in VERDICTS if any(r["v"] == v.verdict for r in rows)]
     scale = {

@@ -142,12 +142,13 @@ def _adjusted(e: MotifEvidence) -> list[tuple[str, str]]:
 
 def _holders(press: Press, e: MotifEvidence) -> list[tuple[str, list[str]]]:
     c = press.ranking.catalogue
+    families = c.has_families
     groups: dict[str, list[str]] = {}
     for i in e.holders.tolist():
         if press.atlas.shown[i]:
-            family = c.family[i] if c.has_families else ""
+            family = c.family[i] if families else ""
             groups.setdefault(family, []).append(c.tradition_names[i] or c.tradition_ids[i])
-    if c.has_families and "" in groups:
+    if families and "" in groups:
         groups["No family given"] = groups.pop("")
     return sorted((family, sorted(people)) for family, people in groups.items())
 

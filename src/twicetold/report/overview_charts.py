@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from twicetold.report.common import Spec, as_float, listed, number, plural, sig
+from twicetold.report.rows import records
 from twicetold.report.theme import VERDICTS, WORLDS, light, look_of, titled
 
 if TYPE_CHECKING:
@@ -85,7 +86,7 @@ def _bands(ranking: Ranking, top: int) -> tuple[list[dict[str, Any]], list[str]]
         here = here.dropna(subset=["low", "high"]).sort_values("holders")
         # Some 160 places on a log axis are as many as an eye can follow.
         keep = np.unique(np.round(np.geomspace(1, max(len(here), 1), 160)).astype(int)) - 1
-        for r in here.iloc[keep].to_dict("records") if len(here) else ():
+        for r in records(here.iloc[keep]) if len(here) else ():
             rows.append(
                 {
                     "w": world,
@@ -181,7 +182,7 @@ def prevalence_chart(ranking: Ranking) -> Spec:
     """How many motifs have how many holders, with the fitted curve and its band."""
     assert ranking.prevalence is not None
     rows = []
-    for r in ranking.prevalence.sort_values("holders").to_dict("records"):
+    for r in records(ranking.prevalence.sort_values("holders")):
         row: dict[str, Any] = {"h": int(r["holders"])}
         for key, short in (("motifs", "m"), ("fitted", "f"), ("low", "l"), ("high", "u")):
             value = as_float(r.get(key))

@@ -13,6 +13,7 @@ from twicetold import __version__
 from twicetold.report import words
 from twicetold.report.common import Spec, known, number, percent, sig
 from twicetold.report.figures import render
+from twicetold.report.rows import records
 from twicetold.report.shelf import style, templates, write
 from twicetold.report.tables import Sheet
 from twicetold.report.theme import COLOURS, VERDICTS, config, light, look_of, titled
@@ -104,7 +105,7 @@ def _panels(table: PowerTable) -> dict[str, Spec]:
                 "l": sig(r["low"], 4),
                 "u": sig(r["high"], 4),
             }
-            for r in frame[frame["truth"].astype(str) == truth].to_dict("records")
+            for r in records(frame[frame["truth"].astype(str) == truth])
         ]
         out[truth] = _panel(truth, rows, looks, (least, most))
     return out
@@ -186,9 +187,7 @@ def _present(table: PowerTable) -> list[Any]:
 
 
 def _smallest_sheet(table: PowerTable) -> Sheet:
-    rows = [
-        (str(r["truth"]), str(r["verdict"]), _fewest(r)) for r in table.smallest.to_dict("records")
-    ]
+    rows = [(str(r["truth"]), str(r["verdict"]), _fewest(r)) for r in records(table.smallest)]
     return Sheet(("if the truth is", "verdict", "holders needed"), tuple(rows), frozenset({2}))
 
 
@@ -205,7 +204,7 @@ def _numbers_sheet(table: PowerTable) -> Sheet:
             percent(r["probability"], 1),
             f"{percent(r['low'], 1)} to {percent(r['high'], 1)}",
         )
-        for r in table.frame.to_dict("records")
+        for r in records(table.frame)
     ]
     heads = ("if the truth is", "holders", "verdict", "how often", "95 % interval")
     return Sheet(heads, tuple(rows), frozenset({1, 3, 4}))

@@ -15,6 +15,7 @@ from twicetold.report.common import (
     probability,
     sig,
 )
+from twicetold.report.rows import records
 from twicetold.report.theme import STATISTICS, WORLDS
 
 if TYPE_CHECKING:
@@ -166,7 +167,7 @@ def correlogram_sheet(evidence: MotifEvidence) -> Sheet:
             percent(r["expected"], 1),
             f"{percent(r['low'], 1)} to {percent(r['high'], 1)}",
         )
-        for r in evidence.correlogram.to_dict("records")
+        for r in records(evidence.correlogram)
     ]
     heads = ("km", "pairs", "both hold it", "expected", "95 % envelope")
     return Sheet(heads, tuple(rows), frozenset({0, 1, 2, 3, 4}))
@@ -195,7 +196,7 @@ def stability_sheet(evidence: MotifEvidence) -> Sheet:
             str(r["verdict"]),
             *[probability(r[f"p_against_{w}"]) for w in worlds],
         )
-        for r in table.to_dict("records")
+        for r in records(table)
     ]
     heads = ("changed", "to", "verdict", *[f"p {w}" for w in worlds])
     return Sheet(heads, tuple(rows), frozenset(range(3, 3 + len(worlds))))
@@ -211,7 +212,7 @@ def pairs_sheet(evidence: MotifEvidence, pages: dict[str, str]) -> Sheet:
     """Motifs on the same traditions, each leading to its page."""
     assert evidence.pairs is not None
     rows, links = [], []
-    for r in evidence.pairs.to_dict("records"):
+    for r in records(evidence.pairs):
         motif = str(r["motif_id"])
         if motif not in pages:
             continue
@@ -227,7 +228,7 @@ def frame_sheet(table: pd.DataFrame, *, shares: tuple[str, ...] = (), most: int 
     """Any small table of results, written for reading."""
     heads = tuple(str(c) for c in table.columns)
     rows = []
-    for r in table.head(most).to_dict("records"):
+    for r in records(table.head(most)):
         rows.append(
             tuple(
                 percent(v, 1)
@@ -238,7 +239,7 @@ def frame_sheet(table: pd.DataFrame, *, shares: tuple[str, ...] = (), most: int 
                 for c, v in r.items()
             )
         )
-    numeric = frozenset(k for k, c in enumerate(table.columns) if table[c].dtype.kind in "iuf")
+    numeric = frozenset(k for k, d in enumerate(table.dtypes) if d.kind in "iuf")
     return Sheet(tuple(h.replace("_", " ") for h in heads), tuple(rows), numeric)
 
 

@@ -2,9 +2,10 @@
 
 from __future__ import annotations
 
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 from twicetold.report.common import as_float, known, number, percent, plural, probability
+from twicetold.report.rows import records
 from twicetold.report.theme import STATISTICS, WORLDS, look_of
 
 if TYPE_CHECKING:
@@ -161,13 +162,16 @@ def power_sentences(evidence: MotifEvidence) -> list[str]:
     """Say, truth by truth, which verdict comes out most often at this number of holders."""
     if evidence.power is None:
         return []
+    best: dict[str, dict[Any, Any]] = {}
+    for r in records(evidence.power):
+        held = best.setdefault(str(r["truth"]), r)
+        if as_float(r["probability"]) > as_float(held["probability"]):
+            best[str(r["truth"])] = r
     out = []
-    for truth in dict.fromkeys(str(t) for t in evidence.power["truth"]):
-        here = evidence.power[evidence.power["truth"].astype(str) == truth]
-        best = max(here.to_dict("records"), key=lambda r: as_float(r["probability"]))
+    for truth, row in best.items():
         out.append(
             f"If the truth were {truth}, {plural(len(evidence.holders), 'holder')} would most "
-            f"often give “{best['verdict']}” ({percent(best['probability'])})."
+            f"often give “{row['verdict']}” ({percent(row['probability'])})."
         )
     return out
 
