@@ -149,6 +149,7 @@ def test_transmission_is_taken_over_and_said_to_be(catalogue, monkeypatch):
     assert kinds == {
         "graph": AGAIN,
         "exponent": SAME,
+        "reach": AGAIN,
         "without family": CARRIED,
         "without region": CARRIED,
     }

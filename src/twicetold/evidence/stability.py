@@ -3,8 +3,8 @@
 Every run is the whole analysis again (worlds, multiplicity, the verdict table), with one thing
 changed and fewer draws. The transmission-only world is the dear one: it is walked again, with
 fewer walks, on other graphs and reaches only; its p is the main run's where just the propensities
-change, which it does not know wherever recording is fitted; and it is taken over from the main run where
-a family or a region is left out. The tables say which.
+change, which it does not know wherever recording is fitted; and it is taken over from the main run
+where a family or a region is left out. The tables say which.
 """
 
 from __future__ import annotations

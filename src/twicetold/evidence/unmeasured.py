@@ -89,14 +89,18 @@ def unmeasured(
                 bound = found.of(k)
                 if factor == 1.0:
                     bounds[motif] = bound
-                rows.append({"motif_id": study.catalogue.motif_ids[motif], **bound})
+                # Restricted motifs count in totals only, so no table names them.
+                shown = study.catalogue.motif_access[motif] != "restricted"
+                name = study.catalogue.motif_ids[motif] if shown else ""
+                rows.append({"motif_id": name, **bound})
     if not rows:
         return Unmeasured(bounds)
     by_motif = pd.DataFrame(rows)[
         ["motif_id", "length_km", "log_sd", "log_sd_low", "log_sd_high", "ratio"]
     ]
     by_motif = by_motif.sort_values(["motif_id", "length_km"], ignore_index=True)
-    return Unmeasured(bounds, by_motif, by_length(by_motif), _notes(study, length))
+    named = by_motif[by_motif["motif_id"] != ""].reset_index(drop=True)
+    return Unmeasured(bounds, named, by_length(by_motif), _notes(study, length))
 
 
 def length_km(study: Study) -> float:
