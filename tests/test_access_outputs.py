@@ -15,6 +15,7 @@ import deposits
 from twicetold import run as commands
 from twicetold.catalogue import read_catalogue
 from twicetold.errors import TwicetoldError
+from twicetold.report.supplement.dictionary import describe
 from twicetold.report.supplement.table import read_rows
 from twicetold.run import check_tables, motif_run, rank_run, supplement_run
 from twicetold.verify import verify_deposit
@@ -222,3 +223,11 @@ def test_the_record_of_a_run_holds_counts_of_withheld_rows_and_nothing_else():
     record = json.loads((deposits.finished_run() / "run.json").read_text(encoding="utf-8"))
     assert record["catalogue"]["withheld_traditions"] == 6
     assert record["catalogue"]["withheld_motifs"] == 1
+
+
+def test_every_column_of_a_run_with_the_spread_worlds_is_described(with_spread):
+    for path in (with_spread[0] / "run" / "tables").glob("*.csv"):
+        header, rows = read_rows(path)
+        for k, column in enumerate(header):
+            said = describe(f"S4_{path.stem}", column, [r[k] for r in rows]).meaning
+            assert said != column.replace("_", " ").capitalize() + ".", (path.stem, column)
