@@ -330,5 +330,5 @@ def at_holders(table: PowerTable, holders: int) -> pd.DataFrame:
     """Rows of the simulated number of holders nearest (in ratio) to a motif's own."""
     looked = np.unique(table.frame["holders"].to_numpy(float))
     near = looked[np.argmin(np.abs(np.log(looked / max(holders, 1))))]
-    here = table.frame["holders"] == near
-    return table.frame.loc[here].reset_index(drop=True)
+    here: pd.DataFrame = table.frame[table.frame["holders"] == near]
+    return here.reset_index(drop=True)

@@ -28,6 +28,8 @@ from twicetold.workers import Pool
 
 #: Route shares are given for up to this many holders; a bank's cost grows with its square.
 MOST_HOLDERS = 300
+#: Walks of a bank for each walk of the plan (which speaks of one world; a bank holds all shares).
+BANK_WALKS = 3.3
 #: Surveyed sets that get a bank of their own: those with the most motifs.
 MOST_BANKS = 8
 
@@ -325,7 +327,10 @@ def _give_shares(
     """Add each motif's posterior of the route shares."""
     seed = study.plan.evidence.seed
     largest = min(int(ground.wanted[-1]), MOST_HOLDERS)
-    bank = build_bank(ground.model(study), largest=largest, seed=seed, pool=pool, use_cache=cache)
+    walks = round(BANK_WALKS * study.plan.evidence.walks)
+    bank = build_bank(
+        ground.model(study), largest=largest, seed=seed, pool=pool, walks=walks, use_cache=cache
+    )
     told = fit_posterior(bank, seed=seed, pool=pool).posterior(ground.group.holders)
     into |= dict(zip(ground.group.motifs, told, strict=True))
 
