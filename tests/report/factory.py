@@ -313,8 +313,8 @@ def make_evidence(catalogue, graph, index, rank, *, rich=True, seed=11) -> Motif
         shares = dataclasses.replace(
             shares, refused="with 3 holders the records say nothing of the shares"
         )
-    kinds = [("contact graph", f"nearest:{k}") for k in (4, 5, 8)] + [("contact graph", "gabriel")]
-    kinds += [("effort exponent", str(g)) for g in (0.0, 0.5, 1.0)]
+    kinds = [("graph", f"nearest:{k}") for k in (4, 5, 8)] + [("graph", "gabriel")]
+    kinds += [("exponent", str(g)) for g in (0.0, 0.5, 1.0)]
     kinds += [("without family", f) for f in FAMILIES if f]
     kinds += [("without region", f"region {k}") for k in range(1, 31)]
     stability = pd.DataFrame(
@@ -500,3 +500,25 @@ def alone(ranking: Ranking, motif_id: str) -> Ranking:
 def with_plan(ranking: Ranking, **changes) -> Ranking:
     """The same results under another plan (they are not computed again)."""
     return dataclasses.replace(ranking, plan=ranking.plan.replace(**changes))
+
+
+def many_motifs(ranking: Ranking, n: int) -> Ranking:
+    """A ranking of ``n`` motifs: the same evidence over and over, under new ids."""
+    kept = [e for e in ranking.evidence if ranking.catalogue.motif_access[e.index] == "open"]
+    evidence = []
+    for k in range(n):
+        e = kept[k % len(kept)]
+        row = dict(e.row) | {"rank": k + 1, "motif_id": f"k{k:05d}", "name": f"{e.name} ({k})"}
+        evidence.append(dataclasses.replace(e, motif_id=row["motif_id"], name=row["name"], row=row))
+    table = pd.DataFrame([e.row for e in evidence])
+    return dataclasses.replace(ranking, motifs=table, evidence=tuple(evidence))
+
+
+def write_run_page(ranking: Ranking, folder):
+    """Write the page of the catalogue alone; give its path."""
+    from twicetold.report.pages import Press
+
+    press = Press(ranking, folder, COMMAND)
+    press.assets()
+    press.run_page()
+    return folder / "index.html"

@@ -240,6 +240,8 @@ def test_the_methods_follow_the_plan_and_the_results(rich, bare):
     assert "p = 0.41" in text
     assert rich.plan.digest()[:12] in text
     assert "proportional to the amount collected" in text
+    assert "another contact graph (nearest:4, nearest:5, nearest:8, gabriel)" in text
+    assert "a region left out (30 in turn)" in text
     plain = " ".join(methods(bare).paragraphs)
     assert "equal for all traditions" in plain
     for absent in ("spread chain", "strands", "different families", "posterior"):

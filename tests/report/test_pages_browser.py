@@ -2,18 +2,14 @@
 
 from __future__ import annotations
 
-import dataclasses
 import shutil
 from importlib import resources
 
 import factory
-import pandas as pd
 import pytest
-from factory import COMMAND
 from test_pages import power_table
 
 from twicetold.report import page_name, write_power
-from twicetold.report.pages import Press
 
 pytestmark = pytest.mark.browser
 FLAGS = (
@@ -226,7 +222,7 @@ def test_a_sign_in_the_picture_leads_to_its_motif_or_picks_several_out(open_shee
 
 
 def test_twenty_thousand_motifs_put_few_rows_in_the_page(open_sheet, rich, tmp_path):
-    path = many_motifs(rich, 20_000, tmp_path)
+    path = factory.write_run_page(factory.many_motifs(rich, 20_000), tmp_path)
     page = open_sheet().open(path)
     milliseconds = page.evaluate(
         "new Promise(done => requestAnimationFrame(() => done(performance.now())))"
@@ -242,22 +238,6 @@ def test_twenty_thousand_motifs_put_few_rows_in_the_page(open_sheet, rich, tmp_p
         ".some(r => r.getAttribute('aria-rowindex') === '20001')"
     )
     assert page.locator("#motif-table tbody tr").count() < 80
-
-
-def many_motifs(ranking, n, folder):
-    """Write a run page of ``n`` motifs: the same evidence over and over, under new ids."""
-    kept = [e for e in ranking.evidence if e.index != 6]
-    evidence = []
-    for k in range(n):
-        e = kept[k % len(kept)]
-        row = dict(e.row) | {"rank": k + 1, "motif_id": f"k{k:05d}", "name": f"{e.name} ({k})"}
-        evidence.append(dataclasses.replace(e, motif_id=row["motif_id"], name=row["name"], row=row))
-    table = pd.DataFrame([e.row for e in evidence])
-    many = dataclasses.replace(ranking, motifs=table, evidence=tuple(evidence))
-    press = Press(many, folder, COMMAND)
-    press.assets()
-    press.run_page()
-    return folder / "index.html"
 
 
 @pytest.mark.parametrize("scheme", ["light", "dark"])

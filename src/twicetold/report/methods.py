@@ -7,8 +7,11 @@ from typing import TYPE_CHECKING, Any
 
 from twicetold.report.common import as_float, known, listing, number, plural, probability
 from twicetold.report.references import BY_KEY, bibtex, cite
+from twicetold.report.words import changed
 
 if TYPE_CHECKING:
+    import pandas as pd
+
     from twicetold.evidence import Ranking
 
 Choice = tuple[str, str, str]
@@ -255,14 +258,14 @@ def _judging(ranking: Ranking) -> str:
 
 
 def _trust(ranking: Ranking) -> str:
-    plan = ranking.plan
     out = []
-    if plan.sensitivity.stability:
+    judged = [e.stability for e in ranking.evidence if e.stability is not None]
+    if judged:
+        kinds = dict.fromkeys(str(k) for table in judged for k in table["kind"].unique())
+        told = [changed(kind) + _settings(kind, judged) for kind in kinds]
         out.append(
-            "Each verdict was computed again under other contact graphs "
-            f"({', '.join(plan.sensitivity.graphs)}), other exponents of effort "
-            f"({', '.join(number(x) for x in plan.sensitivity.exponents)}), and without each "
-            "family and each region; stability is the share of these runs with the same verdict."
+            f"Each verdict was computed again with {listing(told)}; stability is the share of "
+            "these runs with the same verdict."
         )
     if any(known(e.hidden_bound.get("log_sd")) for e in ranking.evidence):
         out.append(
@@ -274,6 +277,16 @@ def _trust(ranking: Ranking) -> str:
         "measured, nor emergence from carriage that ignores distance."
     )
     return " ".join(out)
+
+
+def _settings(kind: str, judged: list[pd.DataFrame]) -> str:
+    """Settings that runs of one kind tried, in brackets; what was left out is only counted."""
+    tried = dict.fromkeys(
+        str(x) for table in judged for x in table.loc[table["kind"] == kind, "setting"].unique()
+    )
+    if kind.startswith("without"):
+        return f" ({number(len(tried))} in turn)"
+    return f" ({', '.join(tried)})" if tried else ""
 
 
 def _software(ranking: Ranking) -> str:

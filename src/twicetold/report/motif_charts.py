@@ -9,7 +9,7 @@ import numpy as np
 
 from twicetold.report.common import Spec, number, percent, plural, probability, sig, title_name
 from twicetold.report.rows import records
-from twicetold.report.theme import STATISTICS, VERDICTS, WORLDS, light, look_of, titled
+from twicetold.report.theme import CHANGES, STATISTICS, VERDICTS, WORLDS, light, look_of, titled
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -145,13 +145,22 @@ def worlds_chart(evidence: MotifEvidence, notice: str = "") -> Spec:
     }
 
 
+#: Farther than any two places on the globe: the last class of distance has no end.
+_FARTHEST_KM = 20_000
+
+
+def distances(low: float, high: float) -> str:
+    """Write a class of distances; the last one holds all that is farther."""
+    return f"over {number(low)}" if high > _FARTHEST_KM else f"{number(low)}–{number(high)}"
+
+
 def correlogram_chart(evidence: MotifEvidence, notice: str = "") -> Spec:
     """Share of pairs that both hold the motif, by distance, with the envelope beside it."""
     assert evidence.correlogram is not None
     rows: list[dict[str, Any]] = []
     for r in records(evidence.correlogram):
         row: dict[str, Any] = {
-            "d": f"{number(r['from_km'])}–{number(r['to_km'])}",
+            "d": distances(r["from_km"], r["to_km"]),
             "n": number(r["pairs"]),
         }
         for key in ("observed", "expected", "low", "high"):
@@ -260,6 +269,7 @@ def _runs(table: pd.DataFrame, own: str) -> tuple[list[dict[str, Any]], list[str
     count: dict[str, int] = {}
     for r in records(table):
         kind = str(r["kind"])
+        kind = CHANGES.get(kind, (kind,))[0]
         k = count.get(kind, 0)
         count[kind] = k + 1
         line = kind + "\u2009" * (k // _PER_LINE)

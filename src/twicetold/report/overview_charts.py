@@ -131,8 +131,8 @@ def _band_layers(worlds: list[str], axes: tuple[Spec, Spec]) -> list[Spec]:
             {"window": [{"op": "last_value", "field": "h", "as": "end"}], "frame": [None, None]},
             {"filter": "datum.h === datum.end"},
         ]
-        area = {"type": "area", "opacity": 0.22, "color": colour, "interpolate": "monotone"}
-        line = {"type": "line", "color": colour, "strokeWidth": 1.4, "interpolate": "monotone"}
+        area = {"type": "area", "opacity": 0.22, "color": colour}
+        line = {"type": "line", "color": colour, "strokeWidth": 1.4}
         word = {"type": "text", "align": "right", "dx": -6, "dy": -9, "fontWeight": 600}
         out += [
             own

@@ -15,6 +15,7 @@ from twicetold.report.common import (
     probability,
     sig,
 )
+from twicetold.report.motif_charts import distances
 from twicetold.report.rows import records
 from twicetold.report.theme import STATISTICS, WORLDS
 
@@ -161,7 +162,7 @@ def correlogram_sheet(evidence: MotifEvidence) -> Sheet:
     assert evidence.correlogram is not None
     rows = [
         (
-            f"{number(r['from_km'])} to {number(r['to_km'])}",
+            distances(r["from_km"], r["to_km"]),
             number(r["pairs"]),
             percent(r["observed"], 1),
             percent(r["expected"], 1),

@@ -28,7 +28,7 @@ COLOURS: dict[str, tuple[str, str]] = {
     "ancestry": ("#5787a8", "#56809c"),
     "emergence": ("#e0962c", "#e6a94f"),
     "several": ("#8c2f5d", "#dc7fb0"),
-    "undecided": ("#a39d92", "#7d786e"),
+    "undecided": ("#928c81", "#7d786e"),
     "inheritance": ("#5d7f3c", "#9cc178"),
 }
 
@@ -110,6 +110,17 @@ STATISTICS: dict[str, str] = {
     "clusters": "clusters",
     "largest_cluster": "holders in the largest cluster",
     "strands": "strands",
+}
+
+#: what a sensitivity run changes -> (label in a figure, words in a sentence)
+CHANGES: dict[str, tuple[str, str]] = {
+    "graph": ("contact graph", "another contact graph"),
+    "exponent": ("exponent of effort", "another exponent of effort"),
+    "propensity": ("propensity", "another rule of propensity"),
+    "reach": ("reach of contact", "contact that reaches further"),
+    "process": ("contact process", "another process of contact"),
+    "without family": ("without a family", "a family left out"),
+    "without region": ("without a region", "a region left out"),
 }
 
 ROUTE_COLOURS = {"emergence": "emergence", "contact": "contact", "inheritance": "inheritance"}

@@ -4,9 +4,9 @@ from __future__ import annotations
 
 from typing import TYPE_CHECKING, Any
 
-from twicetold.report.common import as_float, known, number, percent, plural, probability
+from twicetold.report.common import as_float, known, listing, number, percent, plural, probability
 from twicetold.report.rows import records
-from twicetold.report.theme import STATISTICS, WORLDS, look_of
+from twicetold.report.theme import CHANGES, STATISTICS, WORLDS, look_of
 
 if TYPE_CHECKING:
     from twicetold.evidence import Comparison, MotifEvidence, Ranking
@@ -181,11 +181,17 @@ def stability_sentence(evidence: MotifEvidence) -> str:
     share = as_float(evidence.row.get("stability"))
     if evidence.stability is None or not known(share):
         return ""
+    kinds = dict.fromkeys(str(k) for k in evidence.stability["kind"])
     return (
         f"The same verdict comes out in {percent(share)} of "
-        f"{plural(len(evidence.stability), 'run')} with another contact graph, another weight of "
-        "effort, or without a family or a region."
+        f"{plural(len(evidence.stability), 'run')} with another choice: "
+        f"{listing([changed(k) for k in kinds], 'or')}."
     )
+
+
+def changed(kind: str) -> str:
+    """Say what a kind of sensitivity run changes."""
+    return CHANGES[kind][1] if kind in CHANGES else kind
 
 
 def shares_sentence(evidence: MotifEvidence) -> str:

@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+import csv
 import json
-from collections.abc import Mapping
+from collections.abc import Iterator, Mapping
+from contextlib import contextmanager
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -65,6 +67,23 @@ class Run:
         return [m for m in range(c.n_motifs) if not is_restricted(c, m)]
 
 
+@contextmanager
+def whole_tables(folder: Path) -> Iterator[None]:
+    """Say of a folder whose tables cannot be understood that it is damaged.
+
+    Raises
+    ------
+    TwicetoldError
+    """
+    try:
+        yield
+    except (ValueError, LookupError, csv.Error, AttributeError, TypeError) as err:
+        raise TwicetoldError(
+            f"A file in {folder.name} is damaged ({type(err).__name__}: {err}). "
+            "Write the folder again."
+        ) from err
+
+
 def read_run(folder: Path) -> Run:
     """Read a run's folder.
 
@@ -79,15 +98,15 @@ def read_run(folder: Path) -> Run:
                 f"{folder} must be a folder that `twicetold rank` wrote; it has no {name}. "
                 "Give such a folder, or rank the catalogue first."
             )
+    with whole_tables(folder):
+        return _read_run(folder)
+
+
+def _read_run(folder: Path) -> Run:
     plan = read_plan(folder / "plan.toml")
     rules = CatalogueRules(restricted=plan.catalogue.restricted)
     catalogue = read_catalogue(folder / "catalogue", rules)
-    try:
-        record = json.loads((folder / "run.json").read_text(encoding="utf-8"))
-    except ValueError as err:
-        raise TwicetoldError(
-            f"run.json in {folder.name} is damaged. Rank the catalogue again."
-        ) from err
+    record = dict(json.loads((folder / "run.json").read_text(encoding="utf-8")))
     tables = {p.stem: read_rows(p) for p in sorted((folder / "tables").glob("*.csv"))}
     motifs = read_rows(folder / "motifs.csv")
     if sorted(row[motifs[0].index("motif_id")] for row in motifs[1]) != list(catalogue.motif_ids):
