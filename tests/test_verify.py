@@ -237,3 +237,36 @@ def test_the_guarded_catalogue_reads_back_as_used():
     assert found.tradition_names == run.tradition_names
     assert found.motif_ids == run.motif_ids
     assert found.digest() == round_coordinates(run, 1.0).digest()
+
+
+@pytest.mark.parametrize(
+    ("name", "content"),
+    [
+        ("S3_contacts.csv", "a,b\n1,2\n"),
+        ("S3_contacts.csv", "tradition_id,neighbour_id,length_km,bridge\nT00\n"),
+        ("S3_contacts.csv", "tradition_id,neighbour_id,length_km,bridge\nT00,Tx,1,no\n"),
+        ("S5_provenance.csv", "item\nx\n"),
+        ("files.csv", ""),
+        ("files.csv", "file,bytes,sha256\nx\n"),
+        ("plan.toml", "[graph]\nrule = 7\n"),
+        ("catalogue/traditions.csv", "id\n"),
+        ("S1_motifs.csv", b"\xff\xfe\x00"),
+        ("S3_contacts.csv", ""),
+    ],
+)
+def test_a_damaged_deposit_is_refused_or_fails_in_plain_words(copy, name, content):
+    raw = content if isinstance(content, bytes) else content.encode()
+    (copy / name).write_bytes(raw)
+    try:
+        agrees, _ = verify(copy)
+    except TwicetoldError:  # any other error would be a fault of the program
+        agrees = False
+    assert not agrees
+
+
+@pytest.mark.parametrize("name", ["run.json", "contacts.csv", "motifs.csv", "plan.toml"])
+def test_a_damaged_run_is_refused(tmp_path, name):
+    run = shutil.copytree(deposits.finished_run(), tmp_path / "run")
+    (run / name).write_text("[1, 2", encoding="utf-8")
+    with pytest.raises(TwicetoldError):
+        write_supplement(run, _made(tmp_path / "out"), cldf=False)

@@ -21,7 +21,7 @@ from twicetold.evidence.contacts import KnownContacts, known_contacts, set_key
 from twicetold.evidence.rounded import compare_rounded
 from twicetold.plan import Plan, read_plan
 from twicetold.report.supplement import frame_rows, read_run
-from twicetold.report.supplement.source import Rows, Run, contacts_graph
+from twicetold.report.supplement.source import Rows, Run, contacts_graph, whole_tables
 from twicetold.report.supplement.table import Table, csv_text, read_rows
 from twicetold.report.supplement.tables import (
     contacts_table,
@@ -85,7 +85,8 @@ def verify_deposit(deposit: Path, *, pool: Pool) -> tuple[bool, list[str]]:
             f"{deposit} must be a folder that `twicetold supplement` (or `rank`) wrote; it has no "
             "files.csv. Give such a folder."
         )
-    altered, listed = altered_files(deposit)
+    with whole_tables(deposit):
+        altered, listed = altered_files(deposit)
     lines = [f"Differs from its digest: {name}" for name in altered]
     if not altered:
         lines.append(f"All {listed} files listed are as they were written.")
@@ -96,7 +97,10 @@ def verify_deposit(deposit: Path, *, pool: Pool) -> tuple[bool, list[str]]:
             "`twicetold verify` on the run's own folder."
         )
         return False, lines
-    compared = _compare(_read(deposit), pool)
+    with whole_tables(deposit):
+        found = _read(deposit)
+        contacts = _known_contacts(found)
+    compared = _compare(found, contacts, pool)
     lines += compared.lines()
     agrees = not altered and not compared.differences
     lines.append(
@@ -239,11 +243,10 @@ def _known_contacts(deposit: _Deposit) -> KnownContacts:
     return KnownContacts(whole, pairs, c.latitude, c.longitude)
 
 
-def _compare(deposit: _Deposit, pool: Pool) -> _Compared:
+def _compare(deposit: _Deposit, contacts: KnownContacts, pool: Pool) -> _Compared:
     """Compute every table that can be had again, and compare."""
     c, plan, tables = deposit.catalogue, deposit.plan, deposit.tables
     out = _Compared([], [])
-    contacts = _known_contacts(deposit)
     rebuilt = deposit.exact and not plan.graph.rule.startswith("given:")
     if not rebuilt:
         out.said.append(

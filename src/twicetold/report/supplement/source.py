@@ -77,6 +77,8 @@ def whole_tables(folder: Path) -> Iterator[None]:
     """
     try:
         yield
+    except TwicetoldError:  # says already what is wrong
+        raise
     except (ValueError, LookupError, csv.Error, AttributeError, TypeError) as err:
         raise TwicetoldError(
             f"A file in {folder.name} is damaged ({type(err).__name__}: {err}). "
