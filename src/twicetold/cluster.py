@@ -2,10 +2,13 @@
 
 The cluster's own scheduler decides where a chunk runs and runs it again when a worker is lost;
 chunks are numbered and seeded by number, so the results are those of local threads to the byte.
+Workers must have the same twicetold, NumPy, SciPy and numba as this machine, or nothing is run.
 """
 
 from __future__ import annotations
 
+import os
+import time
 from collections import deque
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
@@ -18,14 +21,32 @@ from twicetold.workers import Key, Out, Pool, Progress, Shared
 TIMEOUT = 20
 #: Chunks under way for each thread of the cluster; more would only fill the scheduler's memory.
 AHEAD = 3
+#: Seconds a cluster may be without any worker before the run gives up.
+PATIENCE = 120.0
+#: Seconds between two looks at the workers while a chunk is awaited.
+LOOK = 5.0
+#: Times that a chunk is handed in again after what it needed was lost with its workers.
+AGAIN = 5
+#: Packages whose versions shape numbers.
+SAME = ("twicetold", "numpy", "scipy", "numba")
 
 
 class ClusterPool:
-    """Run chunks on the workers of a dask.distributed client."""
+    """Run chunks on the workers of a dask.distributed client.
+
+    Parameters
+    ----------
+    client : distributed.Client
+    progress : Progress
+        Told after each chunk.
+    """
 
     def __init__(self, client: Any, progress: Progress) -> None:
         self.client = client
         self.progress = progress
+        #: Threads of this machine, for what never leaves it (training the shares).
+        self.workers = os.cpu_count() or 1
+        self._sent: tuple[object, Any] | None = None
 
     def run(
         self,
@@ -35,31 +56,92 @@ class ClusterPool:
         *,
         label: str,
     ) -> Iterator[Out]:
-        """Yield the results in order; what is shared is sent to each worker once."""
+        """Yield the results in order; what is shared is sent to each worker once.
+
+        Raises
+        ------
+        TwicetoldError
+            When the scheduler is gone, all workers are and none comes back, or a chunk ends every
+            worker it is given to.
+        """
         total = len(keys)
         self.progress(label, 0, total)
-        if not total:
-            return
-        common = self.client.scatter(shared, broadcast=True, hash=False)
-        threads = sum(self.client.nthreads().values()) or 1
-        waiting: deque[Any] = deque()
+        most = AHEAD * (sum(self.client.nthreads().values()) or 1)
+        waiting: deque[tuple[Key, Any]] = deque()
         coming = iter(keys)
+        done = 0
         try:
-            for key in coming:
-                waiting.append(self.client.submit(function, common, key, pure=False, retries=3))
-                if len(waiting) >= AHEAD * threads:
-                    break
-            done = 0
-            while waiting:
-                out = waiting.popleft().result()
+            while done < total:
+                while len(waiting) < most and (key := next(coming, None)) is not None:
+                    waiting.append((key, self._submit(function, shared, key)))
+                key, future = waiting.popleft()
+                out: Out = self._result(function, shared, key, future)
                 done += 1
-                for key in coming:
-                    waiting.append(self.client.submit(function, common, key, pure=False, retries=3))
-                    break
                 yield out
                 self.progress(label, done, total)
         finally:
-            self.client.cancel(list(waiting))
+            if waiting:
+                self.client.cancel([future for _, future in waiting])
+
+    def _submit(self, function: Callable[[Shared, Key], Out], shared: Shared, key: Key) -> Any:
+        return self.client.submit(function, self._common(shared), key, pure=False)
+
+    def _common(self, shared: object) -> Any:
+        """Handle of what is shared; sent once while the same object is used."""
+        if self._sent is not None:
+            known, handle = self._sent
+            if known is shared and handle.status == "finished":
+                return handle
+        # In a list, because a tuple would be taken apart and sent piece by piece.
+        handle = self.client.scatter([shared], broadcast=True, hash=False)[0]
+        self._sent = (shared, handle)
+        return handle
+
+    def _result(
+        self, function: Callable[[Shared, Key], Out], shared: Shared, key: Key, future: Any
+    ) -> Out:
+        """Await one chunk; hand it in again where the shared object went down with its workers."""
+        from distributed import CancelledError, KilledWorker
+
+        for _ in range(AGAIN):
+            try:
+                self._await(future)
+                out: Out = future.result()
+            except KilledWorker as err:
+                raise TwicetoldError(
+                    "One piece of work ended every worker it was given to, most likely for want of "
+                    "memory. Give the workers more memory, or fewer threads each."
+                ) from err
+            except CancelledError:
+                if self.client.status != "running":
+                    break
+                future = self._submit(function, shared, key)
+            else:
+                return out
+        raise TwicetoldError(
+            "The cluster lost the work again and again. Look at its scheduler and workers, then "
+            "run the same command again."
+        )
+
+    def _await(self, future: Any) -> None:
+        """Wait until a chunk is done, failed or lost; never for a cluster without workers."""
+        from distributed import wait
+
+        lonely: float | None = None
+        while not future.done():
+            try:
+                with self.client.as_current():
+                    wait(future, timeout=LOOK)
+            except TimeoutError:
+                if self.client.status != "running":
+                    raise TwicetoldError("The scheduler is gone. Start it and run again.") from None
+                now = time.monotonic()
+                lonely = None if self.client.nthreads() else lonely or now
+                if lonely is not None and now - lonely > PATIENCE:
+                    raise TwicetoldError(
+                        f"The cluster has been without workers for {PATIENCE:.0f} s. Start some "
+                        "and run the same command again."
+                    ) from None
 
 
 @contextmanager
@@ -75,7 +157,8 @@ def open_cluster(address: str, progress: Progress) -> Iterator[Pool]:
     Raises
     ------
     TwicetoldError
-        When dask.distributed is not installed, the scheduler does not answer, or it has no workers.
+        When dask.distributed is not installed, the scheduler does not answer, it has no workers,
+        or these have other versions of what makes numbers.
     """
     try:
         from distributed import Client
@@ -93,6 +176,31 @@ def open_cluster(address: str, progress: Progress) -> Iterator[Pool]:
     try:
         if not client.nthreads():
             raise TwicetoldError(f"The scheduler at {address!r} has no workers. Start some first.")
+        check_versions(client.get_versions(packages=list(SAME)))
         yield ClusterPool(client, progress)
     finally:
         client.close()
+
+
+def check_versions(found: dict[str, Any]) -> None:
+    """Refuse workers that would give other numbers than this machine.
+
+    Parameters
+    ----------
+    found : dict
+        As ``Client.get_versions`` gives it: packages of ``client`` and of each of ``workers``.
+
+    Raises
+    ------
+    TwicetoldError
+        Naming the package, what is here and what a worker has.
+    """
+    here = found["client"]["packages"]
+    for worker, said in sorted(found["workers"].items()):
+        for name in SAME:
+            there = said["packages"].get(name)
+            if there != here.get(name):
+                raise TwicetoldError(
+                    f"Workers must have the same {name} as this machine ({here.get(name)}), but "
+                    f"{worker} has {there or 'none'}. Install the same versions on all of them."
+                )
