@@ -20,6 +20,7 @@ from twicetold._plan_values import (
     coerced,
     one_of,
     plain_value,
+    shown,
     toml_value,
     unknown_name,
 )
@@ -87,7 +88,7 @@ class GraphSection:
         if not re.fullmatch(known, self.rule):
             raise PlanError(
                 f"`graph.rule` must be one of {', '.join(GRAPH_RULES)} (K a whole number, KM "
-                f"kilometres), got {self.rule!r}."
+                f"kilometres), got {shown(self.rule)}."
             )
 
 
@@ -147,7 +148,9 @@ class SpreadSection:
         if isinstance(self.turnover, str):
             one_of("spread.turnover", self.turnover, ("fit",), " or a number")
         elif not 0.0 < self.turnover < 1.0:
-            raise PlanError(f"`spread.turnover` must lie above 0 and below 1, got {self.turnover}.")
+            raise PlanError(
+                f"`spread.turnover` must lie above 0 and below 1, got {self.turnover:g}."
+            )
         one_of("spread.recording", self.recording, ("fit", "complete"))
         between("spread.reach", self.reach, 1.0, 100.0)
         between("spread.min_holders", self.min_holders, 1, 1000)
@@ -364,15 +367,21 @@ def _run_record(text: str) -> dict[str, Any]:
 
 def _plan_text(path: Path) -> str:
     try:
-        if path.stat().st_size > 1_000_000:
+        with path.open("rb") as file:  # what has no end says that it has no size
+            raw = file.read(1_000_001)
+        if len(raw) > 1_000_000:
             raise PlanError(f"{path.name}: a plan is a small TOML file; this one is over 1 MB.")
-        return path.read_bytes().decode("utf-8-sig")
+        return raw.decode("utf-8-sig")
+    except PlanError:
+        raise
     except OSError as err:
         raise PlanError(f"{path}: the plan cannot be read ({err.strerror}).") from err
     except UnicodeDecodeError as err:
         raise PlanError(
             f"{path.name}: a plan must be UTF-8 text; byte {err.start} is not. Save it as UTF-8."
         ) from err
+    except ValueError as err:  # a name no file can have
+        raise PlanError(f"{shown(str(path))}: the plan cannot be read ({err}).") from err
 
 
 def plan_from_mapping(raw: Mapping[str, Any], base: Plan | None = None) -> Plan:
@@ -389,7 +398,7 @@ def plan_from_mapping(raw: Mapping[str, Any], base: Plan | None = None) -> Plan:
         if name not in sections:
             raise PlanError(unknown_name("section", name, sections))
         if not isinstance(values, Mapping):
-            raise PlanError(f"[{name}] must be a section of keys, got {values!r}.")
+            raise PlanError(f"[{name}] must be a section of keys, got {shown(values)}.")
         known = {f.name: f for f in fields(sections[name])}
         changes = {}
         for key, value in values.items():

@@ -17,17 +17,29 @@ from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 from small_catalogue import SOUND, write_csv, write_xlsx
 
+from hostile_counts import counted, took, write_counts
 from twicetold.catalogue import Catalogue, CatalogueRules, check_catalogue, limits
 
 SECONDS = 5.0  # of processor time, so that a busy machine fails no test
 MEBIBYTE = 1 << 20
 
 
-def examine(path: Path, rules: CatalogueRules | None = None) -> str:
+@pytest.fixture(scope="module", autouse=True)
+def counts():
+    """Put what a marked run threw into the report."""
+    yield
+    write_counts()
+
+
+def examine(path: Path, rules: CatalogueRules | None = None, reader: str = "") -> str:
     """Read it, hold the reader to its promises, and hand back what it said."""
     start = time.process_time()
     catalogue, problems = check_catalogue(path, rules)
-    assert time.process_time() - start < SECONDS
+    spent = time.process_time() - start
+    assert spent < SECONDS
+    if reader:
+        took(spent)
+        counted(reader, "" if catalogue is not None else "refused")
     assert (catalogue is None) or isinstance(catalogue, Catalogue)
     assert catalogue is not None or problems
     said = "\n".join(map(str, problems))
@@ -466,7 +478,7 @@ def fuzz_tables(edits, damage, rules) -> None:
         except Exception:  # what csv cannot write is no input
             return
         damaged(folder, damage)
-        examine(folder, rules)
+        examine(folder, rules, "tables as CSV, matrix beside")
     finally:
         shutil.rmtree(folder)
 
@@ -526,7 +538,7 @@ def fuzz_metadata(changes, rules) -> None:
         for steps, key, new in changes:
             altered(metadata, steps, key, new)
         path.write_text(json.dumps(metadata))
-        examine(path, rules)
+        examine(path, rules, "CLDF metadata")
     finally:
         shutil.rmtree(folder)
 
@@ -574,7 +586,7 @@ def fuzz_workbook(part, at, cut, put_in) -> None:
                     place = int(at * len(data))
                     data = data[:place] + put_in + data[place + cut :]
                 new.writestr(item.filename, data)
-        examine(path)
+        examine(path, None, "workbook parts")
     finally:
         shutil.rmtree(folder)
 
@@ -584,6 +596,8 @@ XML = st.one_of(
     st.sampled_from([b"<", b">", b"&#0;", b"&a;", b"<c/>", b'<row r="x">', b"]]>", b"<!--", b'"']),
 )
 QUIET = [HealthCheck.too_slow, HealthCheck.filter_too_much]
+# By hand: new inputs every time.
+MANY = settings(derandomize=False, database=None, deadline=None, suppress_health_check=QUIET)
 
 
 @given(edits=st.lists(EDIT, min_size=1, max_size=6), damage=BYTES, rules=RULES)
@@ -606,20 +620,20 @@ def test_any_workbook(part, at, cut, put_in):
 
 @pytest.mark.calibration
 @given(edits=st.lists(EDIT, min_size=1, max_size=6), damage=BYTES, rules=RULES)
-@settings(max_examples=60_000, deadline=None, suppress_health_check=QUIET)
+@settings(MANY, max_examples=60_000)
 def test_very_many_tables(edits, damage, rules):
     fuzz_tables(edits, damage, rules)
 
 
 @pytest.mark.calibration
 @given(changes=CHANGES, rules=CLDF_RULES)
-@settings(max_examples=40_000, deadline=None, suppress_health_check=QUIET)
+@settings(MANY, max_examples=40_000)
 def test_very_much_metadata(changes, rules):
     fuzz_metadata(changes, rules)
 
 
 @pytest.mark.calibration
 @given(part=SHEET, at=st.floats(0, 1), cut=st.integers(0, 40), put_in=XML)
-@settings(max_examples=10_000, deadline=None, suppress_health_check=QUIET)
+@settings(MANY, max_examples=10_000)
 def test_very_many_workbooks(part, at, cut, put_in):
     fuzz_workbook(part, at, cut, put_in)

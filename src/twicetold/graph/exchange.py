@@ -15,6 +15,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 import numpy.typing as npt
 
+from twicetold.catalogue.notes import shown
 from twicetold.errors import GraphError, TwicetoldWarning
 from twicetold.graph.build import assemble, tidy_edges
 from twicetold.graph.model import ContactGraph
@@ -22,6 +23,9 @@ from twicetold.graph.sphere import IntArray, checked_coordinates
 
 if TYPE_CHECKING:
     from libpysal.graph import Graph
+
+#: Largest file of neighbours; 10,000 traditions with 40 neighbours each take a few megabytes.
+MOST_BYTES = 256_000_000
 
 
 def to_libpysal(graph: ContactGraph, ids: Sequence[str] | None = None) -> Graph:
@@ -164,7 +168,9 @@ def read_neighbours(
     file = Path(path)
     readers = {".gal": _gal_pairs, ".gwt": _gwt_pairs}
     if file.suffix.lower() not in readers:
-        raise GraphError(f"`graph.rule` given:FILE takes a .gal or a .gwt file, got {file.name!r}.")
+        raise GraphError(
+            f"`graph.rule` given:FILE takes a .gal or a .gwt file, got {shown(file.name)}."
+        )
     pairs = list(readers[file.suffix.lower()](file.name, _lines(file)))
     at = {name.replace(" ", "_"): i for i, name in enumerate(ids)}
     at |= {name: i for i, name in enumerate(ids)}
@@ -180,7 +186,7 @@ def read_neighbours(
     elif unknown:
         raise GraphError(
             f"{file.name} names {len(unknown)} traditions that the catalogue does not have: "
-            f"{', '.join(unknown[:5])}{' ...' if len(unknown) > 5 else ''}. "
+            f"{', '.join(map(_said, unknown[:5]))}{' ...' if len(unknown) > 5 else ''}. "
             "Write its ids as they stand in the traditions table."
         )
     known = [(at[a], at[b]) for a, b in pairs if a in at and b in at and at[a] != at[b]]
@@ -189,6 +195,14 @@ def read_neighbours(
 
 def _lines(file: Path) -> list[str]:
     try:
+        if file.exists() and not (file.is_file() or file.is_dir()):
+            # A pipe or a device may never end.
+            raise GraphError(f"The neighbours file {file.name} is not a file. Give a real one.")
+        if file.is_file() and file.stat().st_size > MOST_BYTES:
+            raise GraphError(
+                f"{file.name} is over {MOST_BYTES // 10**6} MB, which no contact graph needs. "
+                "Check that it is the right file."
+            )
         return file.read_text(encoding="utf-8-sig").splitlines()
     except UnicodeDecodeError:
         raise GraphError(f"{file.name} is not UTF-8 text; save it as UTF-8.") from None
@@ -197,28 +211,37 @@ def _lines(file: Path) -> list[str]:
             f"The neighbours file {file.name} cannot be read ({error.strerror}). "
             "Give its path as seen from the folder you are in."
         ) from None
+    except GraphError:
+        raise
+    except ValueError:  # a NUL: no file can be named so
+        raise GraphError("`graph.rule` given:FILE must name a file.") from None
+
+
+def _said(word: str) -> str:
+    """Give an id as it is where a message can hold it, else quoted and shortened."""
+    return word if word.isprintable() and len(word) <= 60 else shown(word)
 
 
 def _gal_pairs(name: str, lines: list[str]) -> Iterator[tuple[str, str]]:
     """Pairs of a GAL file: a header, then for each id a line `id count` and a line of ids."""
     header = lines[0].split() if lines else []
     size = header[0] if len(header) == 1 else "".join(header[1:2])
-    if not (size.isdecimal() and header[0].isdecimal()):
+    if not (size.isdecimal() and header[0].isdecimal() and len(size) <= 18):
         raise GraphError(f"{name}, line 1: a GAL file starts with the number of traditions.")
     words = iter([(w, row) for row, line in enumerate(lines[1:], 2) for w in line.split()])
     blocks = 0
     for focal, row in words:
         count = next(words, ("", row))[0]
-        if not count.isdecimal():
+        if not (count.isdecimal() and len(count) <= 18):
             raise GraphError(
                 f"{name}, line {row}: expected a tradition id and its number of neighbours, "
-                f"got {focal!r} and {count!r}."
+                f"got {shown(focal)} and {shown(count)}."
             )
         for _ in range(int(count)):
             neighbour, _ = next(words, ("", 0))
             if not neighbour:
                 raise GraphError(
-                    f"{name}, line {row}: {focal} should have {count} neighbours, "
+                    f"{name}, line {row}: {_said(focal)} should have {count} neighbours, "
                     "and the file ends before."
                 )
             yield focal, neighbour
@@ -237,7 +260,7 @@ def _gwt_pairs(name: str, lines: list[str]) -> Iterator[tuple[str, str]]:
         if len(words) not in (0, 3):
             raise GraphError(
                 f"{name}, line {row}: expected two tradition ids and a weight, "
-                f"got {line.strip()!r}."
+                f"got {shown(line.strip())}."
             )
         if words:
             yield words[0], words[1]

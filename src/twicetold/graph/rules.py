@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from dataclasses import dataclass
 
+from twicetold.catalogue.notes import shown
 from twicetold.errors import GraphError
 
 _ALL = "nearest:K, within:KM, delaunay, gabriel, given or given:FILE"
@@ -53,10 +54,11 @@ def parse_rule(rule: str) -> Rule:
     kind, colon, value = rule.strip().partition(":")
     value = value.strip()
     if kind == "nearest":
-        if not (value.isascii() and value.isdigit() and 1 <= int(value) <= 40):
+        digits = value.isascii() and value.isdigit() and len(value) <= 9
+        if not (digits and 1 <= int(value) <= 40):
             raise GraphError(
                 "`graph.rule` must be nearest:K with K a whole number from 1 to 40 "
-                f"(for instance nearest:6), got {rule!r}."
+                f"(for instance nearest:6), got {shown(rule)}."
             )
         return Rule("nearest", k=int(value))
     if kind == "within":
@@ -67,11 +69,11 @@ def parse_rule(rule: str) -> Rule:
         if not (math.isfinite(km) and km > 0):
             raise GraphError(
                 "`graph.rule` must be within:KM with KM a number of kilometres above 0 "
-                f"(for instance within:500), got {rule!r}."
+                f"(for instance within:500), got {shown(rule)}."
             )
         return Rule("within", km=km)
     if kind == "given" and not (colon and not value):
         return Rule("given", file=value)
     if kind in ("delaunay", "gabriel") and not colon:
         return Rule(kind)
-    raise GraphError(f"`graph.rule` must be one of {_ALL}; got {rule!r}.")
+    raise GraphError(f"`graph.rule` must be one of {_ALL}; got {shown(rule)}.")
