@@ -106,9 +106,9 @@ def _coordinates(published: Published) -> str:
 def _restricted() -> str:
     return (
         "Restricted records took part and appear only in totals. No restricted tradition or motif "
-        "is listed. Where restricted traditions took part, no attestation is deposited (a total "
-        "less what is listed would point at them), nor any number of a motif with fewer than "
-        f"{SMALLEST_TOTAL} holders, and ranks count the motifs listed."
+        "is listed, and ranks count the motifs listed. No attestation and no figure is deposited: "
+        "a total less what is listed would point at them. Where restricted traditions took part, "
+        f"no number is given of a motif with fewer than {SMALLEST_TOTAL} holders."
     )
 
 
