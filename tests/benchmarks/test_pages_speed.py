@@ -7,8 +7,9 @@ The results are made up (tests/report/factory.py): 1,000 traditions, 2,200 motif
 optional parts: map, four worlds, correlogram, route shares, 41 sensitivity runs, power and related
 motifs. Pages are written by one process on one core, so that its processor time is what a machine
 with nothing else to do would take; the time by the clock stands beside it. The page with 20,000
-motifs is opened in Chromium from disk: from the start of navigation to the first frame with the
-table in it.
+motifs is opened in Chromium from disk: by the clock from the start of navigation to the second
+frame after loading, which has the table in it, and the processor time of the page's thread till
+then (Chromium's ``TaskDuration`` in thread ticks).
 """
 
 from __future__ import annotations
@@ -51,8 +52,8 @@ def writing() -> tuple[list[tuple[float, float]], list[int]]:
     return times, sizes
 
 
-def opening() -> list[float]:
-    """Give milliseconds from navigation to the second frame after loading, each time anew."""
+def opening() -> list[tuple[float, float]]:
+    """Give (processor, clock) seconds from navigation to the table on screen, each time anew."""
     from playwright.sync_api import sync_playwright
 
     many = factory.many_motifs(factory.make_ranking(), ROWS)
@@ -64,18 +65,23 @@ def opening() -> list[float]:
         for _ in range(OPENINGS):
             context = browser.new_context(viewport={"width": 1600, "height": 900}, offline=True)
             page = context.new_page()
+            inspector = context.new_cdp_session(page)
+            inspector.send("Performance.enable", {"timeDomain": "threadTicks"})
             page.goto(url)
             milliseconds, rows = page.evaluate(READY)
             assert rows > 10
-            out.append(float(milliseconds))
+            metrics = inspector.send("Performance.getMetrics")["metrics"]
+            busy = next(m["value"] for m in metrics if m["name"] == "TaskDuration")
+            out.append((float(busy), milliseconds / 1000))
             context.close()
         browser.close()
     return out
 
 
-def report(times: list[tuple[float, float]], sizes: list[int], opened: list[float]) -> str:
+def report(
+    times: list[tuple[float, float]], sizes: list[int], opened: list[tuple[float, float]]
+) -> str:
     """Write what was measured as Markdown."""
-    processor, clock = [median(t[k] for t in times) for k in (0, 1)]
     lines = [
         "# Pages: time to write and to open",
         "",
@@ -89,13 +95,12 @@ def report(times: list[tuple[float, float]], sizes: list[int], opened: list[floa
         "| what | aim | found |",
         "|---|---|---|",
         f"| run page and {len(sizes):,} motif pages, {TRADITIONS:,} traditions, processor time of "
-        f"one process | under 60 s on two cores | {processor:.1f} s "
-        f"({min(t[0] for t in times):.1f} to {max(t[0] for t in times):.1f}) |",
-        f"| the same by the clock | | {clock:.1f} s ({min(t[1] for t in times):.1f} to "
-        f"{max(t[1] for t in times):.1f}) |",
+        f"one process | under 60 s on two cores | {spread(times, 0)} |",
+        f"| the same by the clock | | {spread(times, 1)} |",
         f"| largest motif page | under 300 kB | {max(sizes) / 1000:.0f} kB |",
-        f"| run page with {ROWS:,} table rows, navigation to table on screen | under 1 s | "
-        f"{median(opened) / 1000:.2f} s ({min(opened) / 1000:.2f} to {max(opened) / 1000:.2f}) |",
+        f"| run page with {ROWS:,} table rows till its table is on screen, processor time of the "
+        f"page's thread | under 1 s | {spread(opened, 0)} |",
+        f"| the same by the clock | under 1 s | {spread(opened, 1)} |",
         "",
         "Load of the machine at the end (runnable tasks, one minute): "
         f"{os.getloadavg()[0]:.1f}. Where it is above the number of cores, times by the clock are "
@@ -105,12 +110,20 @@ def report(times: list[tuple[float, float]], sizes: list[int], opened: list[floa
     return "\n".join(lines)
 
 
+def spread(times: list[tuple[float, float]], k: int) -> str:
+    """Write the median, and the lowest and highest in brackets."""
+    values = [t[k] for t in times]
+    return f"{median(values):.2f} s ({min(values):.2f} to {max(values):.2f})"
+
+
 def test_pages_are_written_and_opened_in_time():
     times, sizes = writing()
     assert median(t[0] for t in times) < 60
     assert max(sizes) < 300_000
-    # The quickest opening is the one least disturbed by whatever else the machine does.
-    assert min(opening()) < 1_000
+    opened = opening()
+    assert median(t[0] for t in opened) < 1
+    # The quickest by the clock is the one least disturbed by whatever else the machine does.
+    assert min(t[1] for t in opened) < 1
 
 
 def main() -> None:

@@ -158,7 +158,7 @@ def motif_map(atlas: Atlas, evidence: MotifEvidence) -> Spec:
     clusters = int(evidence.cluster_of.max()) + 1 if len(evidence.cluster_of) else 0
     subtitle = (
         f"{plural(len(evidence.holders), 'holder')} in {plural(clusters, 'cluster')}; "
-        "clusters outlined, joins drawn dark"
+        "clusters outlined, joins as strong lines"
     )
     title = titled(f"Where {evidence.name or evidence.motif_id} is recorded", subtitle, c.notice)
     own = {"joins": joins, "cells": _cells(atlas, evidence, states, clusters)}

@@ -17,30 +17,9 @@ if TYPE_CHECKING:
 
 def motif_context(press: Press, e: MotifEvidence) -> dict[str, Any]:
     """Give what the template of a motif's page shows."""
-    ranking, notice = press.ranking, press.ranking.catalogue.notice
+    ranking = press.ranking
     alpha = ranking.plan.evidence.alpha
-    figures: dict[str, Any] = dict.fromkeys(MOTIF_KINDS)
-    sheets: dict[str, Any] = dict.fromkeys((*MOTIF_KINDS, "pairs"))
-    figures["map"] = press.figure("map", maps.motif_map(press.atlas, e))
-    if e.correlogram is not None and len(e.correlogram):
-        spec = motif_charts.correlogram_chart(e, notice)
-        figures["correlogram"] = press.figure("correlogram", spec)
-        sheets["correlogram"] = tables.correlogram_sheet(e)
-    if e.shares is not None and not e.shares.refused:
-        label = words.shares_sentence(e)
-        figures["shares"] = press.figure("shares", shares_charts.shares_chart(e, notice), label)
-        sheets["shares"] = tables.shares_sheet(e)
-    stability = ""
-    if e.stability is not None and len(e.stability):
-        stability = words.stability_sentence(e) or "The verdict of every run:"
-        spec = motif_charts.stability_chart(e, notice)
-        figures["stability"] = press.figure("stability", spec, stability)
-        sheets["stability"] = tables.stability_sheet(e)
-    if e.power is not None and len(e.power):
-        figures["power"] = press.figure("power", motif_charts.power_chart(e, notice))
-        sheets["power"] = tables.power_sheet(e)
-    if e.pairs is not None and len(e.pairs):
-        sheets["pairs"] = tables.pairs_sheet(e, press.pages)
+    figures, sheets, stability = _drawn(press, e)
     row = e.row
     at = press.place[e.motif_id]
     rank = row.get("rank") if len(ranking.evidence) > 1 else None
@@ -74,6 +53,34 @@ def motif_context(press: Press, e: MotifEvidence) -> dict[str, Any]:
         "labels": press.labels(set(e.holders.tolist())),
         "command": _test_command(press, e),
     }
+
+
+def _drawn(press: Press, e: MotifEvidence) -> tuple[dict[str, Any], dict[str, Any], str]:
+    """Figures and the numbers behind them, those that there are, and the sentence on stability."""
+    notice = press.ranking.catalogue.notice
+    figures: dict[str, Any] = dict.fromkeys(MOTIF_KINDS)
+    sheets: dict[str, Any] = dict.fromkeys((*MOTIF_KINDS, "pairs"))
+    figures["map"] = press.figure("map", maps.motif_map(press.atlas, e))
+    if e.correlogram is not None and len(e.correlogram):
+        spec = motif_charts.correlogram_chart(e, notice)
+        figures["correlogram"] = press.figure("correlogram", spec)
+        sheets["correlogram"] = tables.correlogram_sheet(e)
+    if e.shares is not None and not e.shares.refused:
+        label = words.shares_sentence(e)
+        figures["shares"] = press.figure("shares", shares_charts.shares_chart(e, notice), label)
+        sheets["shares"] = tables.shares_sheet(e)
+    stability = ""
+    if e.stability is not None and len(e.stability):
+        stability = words.stability_sentence(e) or "The verdict of every run:"
+        spec = motif_charts.stability_chart(e, notice)
+        figures["stability"] = press.figure("stability", spec, stability)
+        sheets["stability"] = tables.stability_sheet(e)
+    if e.power is not None and len(e.power):
+        figures["power"] = press.figure("power", motif_charts.power_chart(e, notice))
+        sheets["power"] = tables.power_sheet(e)
+    if e.pairs is not None and len(e.pairs):
+        sheets["pairs"] = tables.pairs_sheet(e, press.pages)
+    return figures, sheets, stability
 
 
 def _neighbour(press: Press, k: int) -> tuple[str, str] | None:

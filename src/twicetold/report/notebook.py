@@ -38,7 +38,7 @@ def _many(ranking: Ranking) -> list[Markup]:
         Markup("<h3 dir='auto'>{}</h3>").format(ranking.catalogue.title or "Catalogue"),
         _line(words.catalogue_sentence(ranking)),
         *[_line(note) for note in ranking.notes],
-        Markup(picture),
+        _picture(picture),
         _table(shown),
     ]
     return [*parts, _line(f"And {number(rest)} more; to_frame() gives all.")] if rest > 0 else parts
@@ -49,7 +49,7 @@ def _one(ranking: Ranking) -> list[Markup]:
     parts = _motif(evidence)
     if not is_restricted(ranking.catalogue, evidence.index):
         spec = specification(ranking, "map", motif=evidence.motif_id)
-        parts.insert(1, Markup(render(spec, "svg").decode()))
+        parts.insert(1, _picture(render(spec, "svg").decode()))
     return parts
 
 
@@ -63,6 +63,10 @@ def _motif(evidence: MotifEvidence) -> list[Markup]:
     )
     sheet = tables.comparison_sheet(evidence)
     return [head, *[_line(s) for s in said if s], _table(sheet)]
+
+
+def _picture(svg: str) -> Markup:
+    return Markup('<div style="max-width:100%;overflow-x:auto">{}</div>').format(Markup(svg))
 
 
 def _line(text: str, style: str = "") -> Markup:

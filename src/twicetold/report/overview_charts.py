@@ -18,6 +18,12 @@ BAND_WORLDS = (("emergence", "emergence"), ("contact", "contact"))
 #: Points at one place but of different verdicts are nudged apart by this factor on the log axes.
 _NUDGE = 1.035
 _QQ_POINTS = 500
+#: Lowest value on the log axis of numbers of motifs.
+_FLOOR = 0.5
+_QQ_COLOURS = {"emergence": "emergence", "ancestry": "inheritance"}
+_QQ_COLOURS |= {"contact": "contact", "transmission": "several"}
+_QQ_SHAPES = {"emergence": "circle", "ancestry": "square"}
+_QQ_SHAPES |= {"contact": "triangle-up", "transmission": "diamond"}
 
 
 def signature_chart(ranking: Ranking) -> Spec:
@@ -180,6 +186,29 @@ def _point_layer(points: list[dict[str, Any]], axes: tuple[Spec, Spec]) -> Spec:
 
 def prevalence_chart(ranking: Ranking) -> Spec:
     """How many motifs have how many holders, with the fitted curve and its band."""
+    rows = _prevalence_rows(ranking)
+    x: Spec = {"field": "h", "type": "quantitative", "scale": {"type": "log", "nice": False}}
+    x |= {"axis": {"title": "holders", "grid": False, "format": "d", "labelOverlap": True}}
+    y: Spec = {"type": "quantitative", "scale": {"type": "log", "nice": False, "clamp": True}}
+    top = max((max(r["m"] or 1.0, r["u"] or 1.0) for r in rows), default=1.0)
+    y["scale"] = y["scale"] | {"domain": [_FLOOR, sig(top * 1.2, 3)]}
+    y |= {"axis": {"title": "motifs", "format": "~r", "tickCount": 4, "labelOverlap": True}}
+    return {
+        "title": titled(
+            "How widely motifs are held",
+            "dots: the catalogue; line and band: fitted log-series, with its 95 % band",
+            ranking.catalogue.notice,
+        ),
+        "width": 420,
+        "height": 280,
+        "data": {"name": "prevalence"},
+        "layer": _prevalence_layers(x, y),
+        "datasets": {"prevalence": rows},
+        "usermeta": {"height": 280},
+    }
+
+
+def _prevalence_rows(ranking: Ranking) -> list[dict[str, Any]]:
     assert ranking.prevalence is not None
     rows = []
     for r in records(ranking.prevalence.sort_values("holders")):
@@ -188,33 +217,27 @@ def prevalence_chart(ranking: Ranking) -> Spec:
             value = as_float(r.get(key))
             # A log axis has no place for nought: nothing is drawn there.
             row[short] = sig(value, 4) if value > 0 else None
-        rows.append(row)
-    floor = 0.5
-    for row in rows:
         if row["u"] is not None:
-            row["l"] = max(row["l"] or 0.0, floor)
-            row["u"] = max(row["u"], floor)
-    x: Spec = {"field": "h", "type": "quantitative", "scale": {"type": "log", "nice": False}}
-    x |= {"axis": {"title": "holders", "grid": False, "format": "d", "labelOverlap": True}}
-    y: Spec = {"type": "quantitative", "scale": {"type": "log", "nice": False, "clamp": True}}
-    top = max((r["m"] or 1.0 for r in rows), default=1.0)
-    top = max(top, max((r["u"] or 1.0 for r in rows), default=1.0))
-    y["scale"] = y["scale"] | {"domain": [floor, sig(top * 1.2, 3)]}
-    y |= {"axis": {"title": "motifs", "format": "~r", "tickCount": 4, "labelOverlap": True}}
-    valid = "isValid(datum.{0}) && datum.{0} >= 0.5"
+            row["l"] = max(row["l"] or 0.0, _FLOOR)
+            row["u"] = max(row["u"], _FLOOR)
+        rows.append(row)
+    return rows
+
+
+def _prevalence_layers(x: Spec, y: Spec) -> list[Spec]:
     hover = [
         {"field": "h", "title": "holders"},
         {"field": "m", "title": "motifs"},
         {"field": "f", "title": "fitted", "format": ".2f"},
     ]
-    layers: list[Spec] = [
+    return [
         {
             "transform": [{"filter": "isValid(datum.u)"}],
             "mark": {"type": "area", "color": light("bar"), "opacity": 0.5, "clip": True},
             "encoding": {"x": x, "y": {"field": "l"} | y, "y2": {"field": "u"}},
         },
         {
-            "transform": [{"filter": valid.format("f")}],
+            "transform": [{"filter": f"isValid(datum.f) && datum.f >= {_FLOOR}"}],
             "mark": {"type": "line", "color": light("soft"), "strokeWidth": 1.4, "clip": True},
             "encoding": {"x": x, "y": {"field": "f"} | y},
         },
@@ -225,26 +248,57 @@ def prevalence_chart(ranking: Ranking) -> Spec:
             "encoding": {"x": x, "y": {"field": "m"} | y, "tooltip": hover},
         },
     ]
-    return {
-        "title": titled(
-            "How widely motifs are held",
-            "dots: the catalogue; line and band: fitted log-series, with its 95 % band",
-            ranking.catalogue.notice,
-        ),
-        "width": 420,
-        "height": 280,
-        "data": {"name": "prevalence"},
-        "layer": layers,
-        "datasets": {"prevalence": rows},
-        "usermeta": {"height": 280},
-    }
 
 
 def qq_chart(ranking: Ranking) -> Spec:
     """Observed p-values against those expected if no motif departed from the world."""
+    rows, worlds = _quantiles(ranking)
+    end = max((r["x"] for r in rows), default=0.0)
+    axis = {"values": list(range(12)), "labelOverlap": True, "labelExpr": _POWER}
+    scales: Spec = {"scale": {"zero": True, "nice": False}}
+    x: Spec = {"field": "x", "type": "quantitative"} | scales
+    x |= {"axis": axis | {"title": "p expected if nothing departed", "grid": False}}
+    y: Spec = {
+        "field": "y",
+        "type": "quantitative",
+        "axis": axis | {"title": "p observed"},
+    } | scales
+    names = [WORLDS[w][0] for w in worlds]
+    world: Spec = {"field": "w", "type": "nominal", "title": None}
+    colours = {"domain": names, "range": [light(_QQ_COLOURS[w]) for w in worlds]}
+    shapes = {"domain": names, "range": [_QQ_SHAPES[w] for w in worlds]}
+    return {
+        "title": titled(
+            "Observed p-values against expected",
+            "testable motifs; above the line: smaller than expected",
+            ranking.catalogue.notice,
+        ),
+        "width": 420,
+        "height": 280,
+        "encoding": {"x": x, "y": y},
+        "layer": [
+            {
+                "data": {"values": [{"x": 0, "y": 0}, {"x": end, "y": end}]},
+                "mark": {"type": "line", "color": light("soft"), "strokeDash": [4, 3]},
+            },
+            {
+                "data": {"name": "quantiles"},
+                "mark": {"type": "point", "filled": True, "size": 26, "opacity": 0.8},
+                "encoding": {
+                    "color": world | {"scale": colours},
+                    "shape": world | {"scale": shapes},
+                },
+            },
+        ],
+        "datasets": {"quantiles": rows},
+        "usermeta": {"height": 280},
+    }
+
+
+def _quantiles(ranking: Ranking) -> tuple[list[dict[str, Any]], list[str]]:
+    """Sorted p-values beside their places, on a log scale, and the worlds that gave any."""
     rows: list[dict[str, Any]] = []
     worlds = []
-    end = 0.0
     alpha = ranking.plan.evidence.alpha
     tested = [e for e in ranking.evidence if as_float(e.row.get("p_attainable")) <= alpha]
     for world in WORLDS:
@@ -259,48 +313,8 @@ def qq_chart(ranking: Ranking) -> Spec:
         keep = np.unique(np.round(np.geomspace(1, len(p), _QQ_POINTS)).astype(int)) - 1
         for k in keep.tolist():
             awaited, seen = -math.log10(place[k]), -math.log10(p[k])
-            end = max(end, awaited)
             rows.append({"w": WORLDS[world][0], "x": sig(awaited, 4), "y": sig(seen, 4)})
-    names = [WORLDS[w][0] for w in worlds]
-    looks = {"emergence": "emergence", "ancestry": "inheritance"}
-    looks |= {"contact": "contact", "transmission": "several"}
-    shapes = {"emergence": "circle", "ancestry": "square"}
-    shapes |= {"contact": "triangle-up", "transmission": "diamond"}
-    axis = {"values": list(range(12)), "labelOverlap": True, "labelExpr": _POWER}
-    x: Spec = {"field": "x", "type": "quantitative"}
-    x |= {"axis": axis | {"title": "p expected if nothing departed", "grid": False}}
-    y: Spec = {"field": "y", "type": "quantitative", "axis": axis | {"title": "p observed"}}
-    scales: Spec = {"scale": {"zero": True, "nice": False}}
-    colour = {"domain": names, "range": [light(looks[w]) for w in worlds]}
-    shape = {"domain": names, "range": [shapes[w] for w in worlds]}
-    return {
-        "title": titled(
-            "Observed p-values against expected",
-            "testable motifs; above the line: smaller than expected",
-            ranking.catalogue.notice,
-        ),
-        "width": 420,
-        "height": 280,
-        "layer": [
-            {
-                "data": {"values": [{"x": 0, "y": 0}, {"x": sig(end, 4), "y": sig(end, 4)}]},
-                "mark": {"type": "line", "color": light("soft"), "strokeDash": [4, 3]},
-                "encoding": {"x": x | scales, "y": y | scales},
-            },
-            {
-                "data": {"name": "quantiles"},
-                "mark": {"type": "point", "filled": True, "size": 26, "opacity": 0.8},
-                "encoding": {
-                    "x": x | scales,
-                    "y": y | scales,
-                    "color": {"field": "w", "type": "nominal", "title": None, "scale": colour},
-                    "shape": {"field": "w", "type": "nominal", "title": None, "scale": shape},
-                },
-            },
-        ],
-        "datasets": {"quantiles": rows},
-        "usermeta": {"height": 280},
-    }
+    return rows, worlds
 
 
 _POWER = "datum.value < 4 ? format(pow(10, -datum.value), '~r') : '1e-' + datum.value"

@@ -39,30 +39,48 @@ def _corner(e: float, c: float, i: float) -> dict[str, float]:
 
 
 def _triangle(shares: RouteShares) -> Spec:
-    top = float(shares.weight.max())
     side = np.unique(np.round(shares.grid[:, 0], 6))
     step = float(np.diff(side).min()) if len(side) > 1 else 0.1
+    # Symbols that touch on the grid at the usual width; the page scales the rest.
+    area = (340 / 1.28 * step) ** 2 * 0.82
+    along: Spec = {"type": "quantitative", "axis": None}
+    x = {"field": "x"} | along | {"scale": {"domain": [-0.14, 1.14], "nice": False, "zero": False}}
+    y = {"field": "y"} | along | {"scale": {"domain": [-0.13, 1.0], "nice": False, "zero": False}}
+    return {
+        "width": 340,
+        "height": 300,
+        "encoding": {"x": x, "y": y},
+        "layer": [*_triangle_layers(area), *_corner_words()],
+        "datasets": _triangle_data(shares),
+        "usermeta": {"aspect": 0.885, "widest": 420},
+    }
+
+
+def _triangle_data(shares: RouteShares) -> dict[str, list[dict[str, Any]]]:
+    top = float(shares.weight.max())
     cells = []
     for (e, c, i), w in zip(shares.grid.tolist(), shares.weight.tolist(), strict=True):
         cell: dict[str, Any] = {"w": sig(w / top, 3), "p": percent(w, 1)}
         said = {"E": percent(e), "C": percent(c), "I": percent(i)}
         cells.append({k: v for k, v in _corner(e, c, i).items() if k != "z"} | cell | said)
-    corners = [(1, 0, 0), (0, 1, 0), (0, 0, 1), (1, 0, 0)]
-    frame = [_corner(*p) | {"k": k} for k, p in enumerate(corners)]
+    corners = {"emergence": (1, 0, 0), "contact": (0, 1, 0), "inheritance": (0, 0, 1)}
     region = _region(shares.low.tolist(), shares.high.tolist())
-    outline = [_corner(*p) | {"k": k} for k, p in enumerate([*region, *region[:1]])]
-    labels = [
-        _corner(1, 0, 0) | {"t": "emergence"},
-        _corner(0, 1, 0) | {"t": "contact"},
-        _corner(0, 0, 1) | {"t": "inheritance"},
-    ]
-    domain = {"x": [-0.14, 1.14], "y": [-0.13, 1.0]}
-    x: Spec = {"field": "x", "type": "quantitative", "axis": None}
-    x |= {"scale": {"domain": domain["x"], "nice": False, "zero": False}}
-    y: Spec = {"field": "y", "type": "quantitative", "axis": None}
-    y |= {"scale": {"domain": domain["y"], "nice": False, "zero": False}}
-    # Symbols that touch on the grid at the usual width; the page scales the rest.
-    area = (340 / 1.28 * step) ** 2 * 0.82
+
+    def closed(points: list[Any]) -> list[dict[str, Any]]:
+        return [_corner(*p) | {"k": k} for k, p in enumerate([*points, *points[:1]])]
+
+    return {
+        "cells": cells,
+        "frame": closed(list(corners.values())),
+        "outline": closed(region),
+        "mean": [_corner(*shares.mean.tolist())],
+        "labels": [_corner(*place) | {"t": word} for word, place in corners.items()],
+        "thirds": _thirds(),
+    }
+
+
+def _triangle_layers(area: float) -> list[Spec]:
+    """Grid, posterior, frame, the 90 % intervals and the mean, from below to above."""
     hover = [
         {"field": "E", "title": "emergence"},
         {"field": "C", "title": "contact"},
@@ -70,50 +88,27 @@ def _triangle(shares: RouteShares) -> Spec:
         {"field": "p", "title": "probability"},
     ]
     line = {"type": "line", "color": light("soft"), "strokeWidth": 1}
-    mean = [_corner(*shares.mean.tolist())]
-    return {
-        "width": 340,
-        "height": 300,
-        "encoding": {"x": x, "y": y},
-        "layer": [
-            {"data": {"name": "thirds"}, "mark": line | {"color": light("rule")}}
-            | {"encoding": {"detail": {"field": "g"}, "order": {"field": "k"}}},
-            {
-                "data": {"name": "cells"},
-                "mark": {"type": "point", "shape": "circle", "filled": True, "size": area}
-                | {"color": light("contact")},
-                "encoding": {
-                    "opacity": {"field": "w", "type": "quantitative", "legend": None}
-                    | {"scale": {"domain": [0, 1], "range": [0, 0.9]}},
-                    "tooltip": hover,
-                },
+    strong = {"type": "line", "color": light("tail"), "strokeWidth": 2, "strokeJoin": "round"}
+    order = {"order": {"field": "k"}}
+    cross = {"type": "point", "shape": "cross", "filled": True, "size": 130, "opacity": 1}
+    cross |= {"color": light("tail"), "stroke": light("paper"), "strokeWidth": 1}
+    return [
+        {"data": {"name": "thirds"}, "mark": line | {"color": light("rule")}}
+        | {"encoding": order | {"detail": {"field": "g"}}},
+        {
+            "data": {"name": "cells"},
+            "mark": {"type": "point", "shape": "circle", "filled": True, "size": area}
+            | {"color": light("contact")},
+            "encoding": {
+                "opacity": {"field": "w", "type": "quantitative", "legend": None}
+                | {"scale": {"domain": [0, 1], "range": [0, 0.9]}},
+                "tooltip": hover,
             },
-            {"data": {"name": "frame"}, "mark": line | {"strokeWidth": 1.3}}
-            | {"encoding": {"order": {"field": "k"}}},
-            {
-                "data": {"name": "outline"},
-                "mark": {"type": "line", "color": light("tail"), "strokeWidth": 2}
-                | {"strokeJoin": "round"},
-                "encoding": {"order": {"field": "k"}},
-            },
-            {
-                "data": {"name": "mean"},
-                "mark": {"type": "point", "shape": "cross", "filled": True, "size": 130}
-                | {"color": light("tail"), "opacity": 1, "stroke": light("paper")}
-                | {"strokeWidth": 1},
-            },
-            *_corner_words(),
-        ],
-        "datasets": {
-            "cells": cells,
-            "frame": frame,
-            "outline": outline,
-            "mean": mean,
-            "labels": labels,
-            "thirds": _thirds(),
         },
-        "usermeta": {"aspect": 0.885, "widest": 420},
-    }
+        {"data": {"name": "frame"}, "mark": line | {"strokeWidth": 1.3}, "encoding": order},
+        {"data": {"name": "outline"}, "mark": strong, "encoding": order},
+        {"data": {"name": "mean"}, "mark": cross},
+    ]
 
 
 def _thirds() -> list[dict[str, Any]]:

@@ -173,7 +173,7 @@ def config() -> dict[str, Any]:
             "labelLimit": 260,
             "symbolStrokeWidth": 1.5,
             "symbolSize": 70,
-            "columnPadding": 14,
+            "columnPadding": 22,
             "rowPadding": 4,
         },
         "text": {"color": ink, "fontSize": 11},
