@@ -47,6 +47,15 @@ def contents(folder: Path) -> dict[str, bytes]:
     return found
 
 
+@pytest.fixture(autouse=True)
+def counted():
+    """Say what each test counted as soon as it has: the whole takes long."""
+    before = set(RESULTS)
+    yield
+    for name in RESULTS.keys() - before:
+        print(f"\n{name}: {'; '.join(RESULTS[name])}")
+
+
 def differing(one, other) -> list[str]:
     """Names of the files that are not the same in both."""
     other = other or {}
@@ -313,7 +322,7 @@ def test_two_runs_into_one_folder(ground, tmp_path):
 
 def test_report():
     """Write down what was counted; only a whole run of this file may do so."""
-    if len(RESULTS) < 16:
+    if len(RESULTS) < 15:
         pytest.skip("not all of the trials were run")
     kills = sum(int(v[0].split()[0]) for k, v in RESULTS.items() if k.startswith("kill"))
     lines = [
