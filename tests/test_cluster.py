@@ -37,7 +37,7 @@ def local_cluster(workers=2):
         threads_per_worker=1,
         processes=True,
         host="127.0.0.1",
-        dashboard_address=None,
+        dashboard_address="127.0.0.1:0",
         memory_limit=0,
         silence_logs=50,
     )
@@ -282,8 +282,8 @@ def test_chunk_that_ends_every_worker_is_named():
 @pytest.mark.parametrize("worlds", ["emergence,ancestry", "emergence,contact,transmission"])
 def test_worker_killed_half_way_changes_no_byte(catalogue, worlds):
     plan = short_plan(evidence__worlds=tuple(worlds.split(",")))
-    plan = plan.replace(evidence__draws=1_999_999) if "ancestry" in worlds else plan
-    plan = plan.replace(evidence__walks=20_000) if "contact" in worlds else plan
+    plan = plan.replace(evidence__draws=499_999) if "ancestry" in worlds else plan
+    plan = plan.replace(evidence__walks=5_000) if "contact" in worlds else plan
     here = everything(
         rank_catalogue(catalogue, plan, pool=ThreadPool(2), cache=False, details=False)
     )
