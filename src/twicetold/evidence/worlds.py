@@ -21,7 +21,7 @@ from twicetold.references.ancestry import HolderSets, Lineages, ancestry_world
 from twicetold.references.emergence import EmergenceWorld, emergence_world
 from twicetold.references.law import Law
 from twicetold.references.pvalue import p_attainable, p_few, p_many
-from twicetold.statistics import STATISTICS, moran_from_score, observe
+from twicetold.statistics import STATISTICS, observe
 from twicetold.workers import Pool, ThreadPool
 
 #: Direction in which each statistic speaks against emergence alone.
@@ -143,7 +143,8 @@ def _shared(
         pool=pool,
         moran_thresholds={n: np.array(sorted(v), dtype=np.int64) for n, v in scores.items() if n},
     )
-    return {m: _comparisons(study, group, world, observed, m) for m in group.motifs}
+    known: dict[tuple[str, int, float], Comparison] = {}
+    return {m: _comparisons(study, group, world, observed, m, known) for m in group.motifs}
 
 
 @dataclass(frozen=True)
@@ -189,13 +190,21 @@ def _own_sweep(shared: _Own, k: int) -> tuple[Comparison, ...]:
         pool=ThreadPool(1),
         moran_thresholds={n: observed.scores[place : place + 1]},
     )
-    return _comparisons(shared.study, group, world, observed, motif)
+    return _comparisons(shared.study, group, world, observed, motif, {})
 
 
-def _comparisons(
-    study: Study, group: Group, world: EmergenceWorld, observed: ObservedMotifs, motif: int
+def _comparisons(  # noqa: PLR0917 - one record more than pylint's five
+    study: Study,
+    group: Group,
+    world: EmergenceWorld,
+    observed: ObservedMotifs,
+    motif: int,
+    known: dict[tuple[str, int, float], Comparison],
 ) -> tuple[Comparison, ...]:
-    """Every statistic of one motif against emergence alone; joins decide."""
+    """Every statistic of one motif against emergence alone; joins decide.
+
+    ``known`` holds what was compared before: many motifs have the same holders and joins.
+    """
     k = observed.place[motif]
     n = int(observed.holders[k])
     if not 1 <= n <= group.n:
@@ -204,8 +213,9 @@ def _comparisons(
     for statistic, direction in DIRECTIONS.items():
         if statistic in OF_FAMILIES and not study.families:
             continue
-        out.append(
-            compare(
+        key = (statistic, n, float(observed.value(motif, statistic)))
+        if key not in known:
+            known[key] = compare(
                 "emergence",
                 statistic,
                 direction,
@@ -213,23 +223,27 @@ def _comparisons(
                 world.law(statistic, n),
                 primary=statistic == "joins",
             )
-        )
-    p = world.moran_p(n, int(observed.scores[k]))
-    defined = not math.isnan(float(observed.moran[k]))
-    expected = moran_from_score(group.graph, n, world.moran_mean(n)) if defined else math.nan
-    out.append(
-        Comparison(
-            world="emergence",
-            statistic="moran_i",
-            direction="many",
-            observed=float(observed.moran[k]),
-            expected=expected,
-            p=p if defined else math.nan,
-            p_attainable=math.nan,
-            primary=False,
-        )
-    )
+        out.append(known[key])
+    key = ("moran_i", n, float(observed.scores[k]))
+    if key not in known:
+        known[key] = _moran(world, n, int(observed.scores[k]), float(observed.moran[k]))
+    out.append(known[key])
     return tuple(out)
+
+
+def _moran(world: EmergenceWorld, n: int, score: int, moran: float) -> Comparison:
+    """Compare Moran's I, which is known by its whole-number score."""
+    defined = not math.isnan(moran)
+    return Comparison(
+        world="emergence",
+        statistic="moran_i",
+        direction="many",
+        observed=moran,
+        expected=world.moran_mean(n) if defined else math.nan,
+        p=world.moran_p(n, score) if defined else math.nan,
+        p_attainable=math.nan,
+        primary=False,
+    )
 
 
 def compare(
