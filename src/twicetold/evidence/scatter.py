@@ -38,9 +38,9 @@ World = Literal["contact", "transmission"]
 INHERITANCE = (0.0, 0.25, 0.5, 0.75, 1.0)
 #: Reweighting to another turnover must keep this part of the effective draws; else it is walked.
 KEEP = 0.25
-#: Worlds beside the first (other inheritance shares and recordings) get this part of the walks:
-#: 10,000 then leave them the 2,000 effective draws a p-value near .05 needs.
-BESIDE = 0.4
+#: Worlds beside the first (other inheritance shares and recordings) get this part of the walks, and
+#: may grow to this many times it: of 10,000 walks, that leaves them some 1,300 effective draws.
+BESIDE, BESIDE_GROWTH = 0.25, 2
 #: World -> (statistic, direction), the primary one first.
 MEASURES: dict[World, tuple[tuple[str, Literal["many", "few"]], ...]] = {
     "contact": (("joins", "few"), ("strands", "many")),
@@ -274,10 +274,14 @@ class _Walks:
     pool: Pool | None
 
     @property
+    def first(self) -> bool:
+        """Whether this is contact alone at the fitted recording."""
+        return self.share == 0.0 and self.point is self.what.confidence.points[0]
+
+    @property
     def walks(self) -> int:
         """Walks of this world."""
-        first = self.share == 0.0 and self.point is self.what.confidence.points[0]
-        return self.what.walks if first else max(100, round(BESIDE * self.what.walks))
+        return self.what.walks if self.first else max(100, round(BESIDE * self.what.walks))
 
     def walk(self, turnover: float, counts: IntArray) -> SpreadWorld:
         """Walk at one turnover."""
@@ -288,6 +292,7 @@ class _Walks:
             walks=self.walks,
             seed=self.what.seed,
             pool=self.pool,
+            growth=GROWTH if self.first else BESIDE_GROWTH,
         )
 
     def depends_on(self) -> dict[str, object]:
@@ -306,7 +311,7 @@ class _Walks:
             "largest": self.largest,
             "walks": self.walks,
             "seed": self.what.seed,
-            "design": (KEEP, KEPT, GROWTH),
+            "design": (KEEP, KEPT, GROWTH, BESIDE_GROWTH),
         }
 
 

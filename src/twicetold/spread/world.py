@@ -238,13 +238,14 @@ def spread_world(
     seed: int = 1,
     pool: Pool | None = None,
     key: tuple[int, ...] = (Stream.SPREAD,),
+    growth: int = GROWTH,
 ) -> SpreadWorld:
     """Run the spread chain and keep its snapshots at every count asked for.
 
     The law of a count depends on the model, ``largest``, ``walks``, ``seed`` and that count, and on
     nothing else: not on the other counts asked for, the workers, or the pieces of work. Walks are
-    added (up to four times ``walks``) while a count has fewer than ``walks / 5`` effective draws
-    (2,000 for the default), and a count uses only the walks *it* called for; so ``largest`` must be
+    added (up to ``growth`` times ``walks``) while a count has fewer than ``walks / 5`` effective
+    draws (2,000 for the default), and a count uses only the walks *it* called for; so ``largest`` must be
     the catalogue's largest count, whether one motif is tested or all are ranked.
 
     Parameters
@@ -262,6 +263,8 @@ def spread_world(
     key : tuple of int
         First words of the spawn key (a :class:`Stream`, then anything), so that unrelated worlds
         can have unrelated draws; worlds that share it share random numbers.
+    growth : int
+        1, 2 or 4: walks may grow to this many times what was asked.
 
     Returns
     -------
@@ -280,7 +283,8 @@ def spread_world(
     parts: list[_Part] = []
     used = np.full(len(wanted), walks, dtype=np.int64)
     done = 0
-    for until in (walks, 2 * walks, GROWTH * walks):
+    steps = [walks * k for k in (1, 2, 4) if k <= growth]
+    for step, until in enumerate(steps):
         size = work_size(job.tables, wanted)
         pieces = [(a, min(size, until - a)) for a in range(done, until, size)]
         parts.extend(runner.run(_run, job, pieces, label="spread walks"))
@@ -288,9 +292,9 @@ def spread_world(
         weight = np.concatenate([p[0] for p in parts])
         poor = np.array([effective_size(weight[:, k]) < walks / 5 for k in range(len(wanted))])
         grow = poor & (used == until)
-        if until == GROWTH * walks or not grow.any():
+        if until == steps[-1] or not grow.any():
             break
-        used[grow] = 2 * walks if until == walks else GROWTH * walks
+        used[grow] = steps[step + 1]
     world = SpreadWorld(
         model=model,
         cap=cap,
