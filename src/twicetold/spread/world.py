@@ -245,8 +245,8 @@ def spread_world(
     The law of a count depends on the model, ``largest``, ``walks``, ``seed`` and that count, and on
     nothing else: not on the other counts asked for, the workers, or the pieces of work. Walks are
     added (up to ``growth`` times ``walks``) while a count has fewer than ``walks / 5`` effective
-    draws (2,000 for the default), and a count uses only the walks *it* called for; so ``largest`` must be
-    the catalogue's largest count, whether one motif is tested or all are ranked.
+    draws (2,000 for the default), and a count uses only the walks *it* called for; so ``largest``
+    must be the catalogue's largest count, whether one motif is tested or all are ranked.
 
     Parameters
     ----------
