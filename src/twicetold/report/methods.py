@@ -10,8 +10,6 @@ from twicetold.report.references import BY_KEY, bibtex, cite
 from twicetold.report.words import changed
 
 if TYPE_CHECKING:
-    import pandas as pd
-
     from twicetold.evidence import Ranking
 
 Choice = tuple[str, str, str]
@@ -259,10 +257,9 @@ def _judging(ranking: Ranking) -> str:
 
 def _trust(ranking: Ranking) -> str:
     out = []
-    judged = [e.stability for e in ranking.evidence if e.stability is not None]
-    if judged:
-        kinds = dict.fromkeys(str(k) for table in judged for k in table["kind"].unique())
-        told = [changed(kind) + _settings(kind, judged) for kind in kinds]
+    tried = _tried(ranking)
+    if tried:
+        told = [changed(kind) + _settings(kind, settings) for kind, settings in tried.items()]
         out.append(
             f"Each verdict was computed again with {listing(told)}; stability is the share of "
             "these runs with the same verdict."
@@ -279,14 +276,25 @@ def _trust(ranking: Ranking) -> str:
     return " ".join(out)
 
 
-def _settings(kind: str, judged: list[pd.DataFrame]) -> str:
+def _tried(ranking: Ranking) -> dict[str, list[str]]:
+    """Kinds of sensitivity runs, each with the settings that any motif was judged under."""
+    tried: dict[str, dict[str, None]] = {}
+    for evidence in ranking.evidence:
+        table = evidence.stability
+        if table is not None:
+            # Plain lists: there may be many thousands of these tables.
+            for kind, setting in zip(
+                table["kind"].tolist(), table["setting"].tolist(), strict=True
+            ):
+                tried.setdefault(str(kind), {})[str(setting)] = None
+    return {kind: list(settings) for kind, settings in tried.items()}
+
+
+def _settings(kind: str, settings: list[str]) -> str:
     """Settings that runs of one kind tried, in brackets; what was left out is only counted."""
-    tried = dict.fromkeys(
-        str(x) for table in judged for x in table.loc[table["kind"] == kind, "setting"].unique()
-    )
     if kind.startswith("without"):
-        return f" ({number(len(tried))} in turn)"
-    return f" ({', '.join(tried)})" if tried else ""
+        return f" ({number(len(settings))} in turn)"
+    return f" ({', '.join(settings)})"
 
 
 def _software(ranking: Ranking) -> str:
