@@ -44,7 +44,7 @@ def run_context(press: Press) -> dict[str, Any]:
     hidden = len(ranking.evidence) - len(press.shown)
     return {
         "summary": _summary(ranking),
-        "bands": ranking.bands is not None,
+        "contact_band": ranking.bands is not None and "contact" in set(ranking.bands["world"]),
         "counts": [(v, number(counts[v.verdict])) for v in VERDICTS],
         "notes": ranking.notes,
         "figures": figures,
