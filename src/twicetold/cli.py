@@ -219,6 +219,7 @@ def rank(
             pool=pool,
             force=force,
             cache=not no_cache,
+            tell=None if quiet else lambda line: typer.echo(line, err=True),
         )
     if not quiet:
         typer.echo(said)

@@ -29,6 +29,10 @@ LOOK = 5.0
 AGAIN = 5
 #: Packages whose versions shape numbers.
 SAME = ("twicetold", "numpy", "scipy", "numba")
+_GONE = "The cluster's scheduler is gone. Start it and run the same command again."
+_LONELY = (
+    "The cluster has been without workers for {:.0f} s. Start some and run the same command again."
+)
 
 
 class ClusterPool:
@@ -66,7 +70,7 @@ class ClusterPool:
         """
         total = len(keys)
         self.progress(label, 0, total)
-        most = AHEAD * (sum(self.client.nthreads().values()) or 1)
+        most = AHEAD * max(self._threads(), 1)
         waiting: deque[tuple[Key, Any]] = deque()
         coming = iter(keys)
         done = 0
@@ -92,10 +96,35 @@ class ClusterPool:
             known, handle = self._sent
             if known is shared and handle.status == "finished":
                 return handle
-        # In a list, because a tuple would be taken apart and sent piece by piece.
-        handle = self.client.scatter([shared], broadcast=True, hash=False)[0]
+        handle = self._send(shared)
         self._sent = (shared, handle)
         return handle
+
+    def _send(self, shared: object) -> Any:
+        """Send to every worker; wait for workers while there are none."""
+        until = time.monotonic() + PATIENCE
+        while True:
+            if self._threads():
+                try:
+                    # In a list, because a tuple would be taken apart and sent piece by piece.
+                    return self.client.scatter([shared], broadcast=True, hash=False)[0]
+                except (TimeoutError, ValueError):
+                    pass  # a worker went while it was being sent to
+            if time.monotonic() > until:
+                raise TwicetoldError(_LONELY.format(PATIENCE))
+            time.sleep(min(1.0, LOOK))
+
+    @property
+    def threads(self) -> int:
+        """Threads of the cluster, for estimates."""
+        return max(self._threads(), 1)
+
+    def _threads(self) -> int:
+        """Count the threads of all workers there are now."""
+        try:
+            return sum(self.client.nthreads().values())
+        except OSError as err:
+            raise TwicetoldError(_GONE) from err
 
     def _result(
         self, function: Callable[[Shared, Key], Out], shared: Shared, key: Key, future: Any
@@ -134,14 +163,11 @@ class ClusterPool:
                     wait(future, timeout=LOOK)
             except TimeoutError:
                 if self.client.status != "running":
-                    raise TwicetoldError("The scheduler is gone. Start it and run again.") from None
+                    raise TwicetoldError(_GONE) from None
                 now = time.monotonic()
-                lonely = None if self.client.nthreads() else lonely or now
+                lonely = None if self._threads() else lonely or now
                 if lonely is not None and now - lonely > PATIENCE:
-                    raise TwicetoldError(
-                        f"The cluster has been without workers for {PATIENCE:.0f} s. Start some "
-                        "and run the same command again."
-                    ) from None
+                    raise TwicetoldError(_LONELY.format(PATIENCE)) from None
 
 
 @contextmanager

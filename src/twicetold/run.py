@@ -8,7 +8,7 @@ import json
 import math
 import platform
 import time
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from contextlib import AbstractContextManager, nullcontext
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -20,7 +20,7 @@ from twicetold.plan import COLUMNS, Plan
 if TYPE_CHECKING:
     import pandas as pd
 
-    from twicetold.catalogue import CatalogueRules
+    from twicetold.catalogue import Catalogue, CatalogueRules
     from twicetold.evidence import MotifEvidence, Ranking
     from twicetold.report.supplement import Run
     from twicetold.workers import Pool
@@ -171,8 +171,9 @@ def rank_run(
     without: tuple[str, ...] = (),
     force: bool = False,
     cache: bool = True,
+    tell: Callable[[str], None] | None = None,
 ) -> str:
-    """Rank a catalogue and write its folder; give what to print."""
+    """Rank a catalogue and write its folder; give what to print. ``tell`` hears of a long run."""
     from twicetold.catalogue import read_catalogue
     from twicetold.evidence import rank_catalogue
     from twicetold.evidence.ranking import check_order
@@ -181,6 +182,8 @@ def rank_run(
     with claimed(out, force=force) as claim:
         clock = [time.perf_counter()]
         catalogue = read_catalogue(path, rules_of(plan))
+        if tell is not None:
+            _forewarn(catalogue, plan, pool, tell)
         clock.append(time.perf_counter())
         moved = None
         if without:
@@ -197,6 +200,16 @@ def rank_run(
             timings = dict(zip(("read", "compute", "write"), seconds, strict=True))
             write_text(part / "timings.json", _json({"seconds": timings}))
         return _said(ranking, out, seconds, moved)
+
+
+def _forewarn(catalogue: Catalogue, plan: Plan, pool: Pool, tell: Callable[[str], None]) -> None:
+    """Say before a long run what it will take."""
+    from twicetold.evidence.cost import forewarning
+    from twicetold.evidence.study import prepare
+
+    said = forewarning(prepare(catalogue, plan), pool)
+    if said:
+        tell(said)
 
 
 def _write_run(ranking: Ranking, folder: Path, *, path: Path, by: str, moved: Any) -> None:
