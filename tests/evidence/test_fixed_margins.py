@@ -6,13 +6,13 @@ import itertools
 
 import numpy as np
 import pytest
-import scipy.sparse as sp
 
 from made_up import catalogue_of
 from twicetold.evidence import rank_catalogue, test_motif
 from twicetold.evidence.propensities import group_propensity
 from twicetold.evidence.study import prepare
 from twicetold.plan import Plan
+from twicetold.references.saturation import recorded_rates
 
 PLAN = Plan().replace(evidence__worlds=("emergence", "ancestry"), evidence__draws=999)
 
@@ -71,15 +71,23 @@ def test_a_motif_alone_has_the_numbers_it_has_in_the_ranking(catalogue, propensi
             assert alone.row[column] == pytest.approx(row[column], nan_ok=True, abs=0)
 
 
-def test_totals_are_weighed_by_what_was_searched():
+def test_recorded_propensities_are_those_of_the_whole_catalogue():
     # Tradition 3 was searched for the first two motifs only.
     rows = [(0, 3), (1, 3), (0, 1), (0, 2), (0, 2)]
     surveyed = [range(4), range(4), range(3), range(3), range(3)]
-    study = prepare(catalogue_of(rows, 4, surveyed=surveyed), PLAN.replace(
-        emergence__propensity="recorded"))  # fmt: skip
-    group = next(g for g in study.groups if g.n == 4)
-    found = group_propensity(study, group)
-    assert found.shared.tolist() == [4.5, 2.5, 2.5, 2.5 / (2 / 5)]
-    assert found.own is not None
-    assert found.own(0).tolist() == [3.5, 2.5, 2.5, 1.5 / (2 / 5)]
-    assert isinstance(found.own.attested, sp.csr_array)
+    catalogue = catalogue_of(rows, 4, surveyed=surveyed)
+    study = prepare(catalogue, PLAN.replace(emergence__propensity="recorded"))
+    rates = recorded_rates(
+        catalogue.attested, np.array(catalogue.surveyed_sets), catalogue.surveyed_of
+    )
+    for group in study.groups:
+        found = group_propensity(study, group)
+        assert np.array_equal(found.shared, rates.common[group.traditions])
+        assert found.own is not None
+        for motif, held in zip(group.motifs, group.holders, strict=True):
+            own = found.own(motif)
+            others = np.setdiff1d(np.arange(group.n), held)
+            assert np.array_equal(own[held], rates.lowered[group.traditions][held])
+            assert np.array_equal(own[others], found.shared[others])
+    # Two records among two motifs weigh more than two among five.
+    assert rates.common[3] > rates.common[1]

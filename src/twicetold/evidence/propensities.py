@@ -14,6 +14,10 @@ from twicetold.evidence.study import Group, Study
 from twicetold.references.emergence import effort_propensity, equal_propensity
 
 FloatArray = npt.NDArray[np.float64]
+IntArray = npt.NDArray[np.int64]
+
+#: Motifs whose numbers of holders lie within this factor share a class of the covariate fit.
+CLASS_WIDTH = 1.5
 
 
 @dataclass(frozen=True)
@@ -23,19 +27,21 @@ class WithoutOwnRecord:
     Parameters
     ----------
     attested : (M, N) scipy.sparse.csr_array of bool
-    exposure : (N,) float64
-        Motifs searched for in each tradition, relative to the most searched one: a total means
-        less where more was looked for.
+    common, lowered : (N,) float64
+        Propensities from all motifs, and with one record fewer: see
+        :class:`twicetold.references.saturation.RecordedRates`.
     """
 
     attested: sp.csr_array
-    exposure: FloatArray
+    common: FloatArray
+    lowered: FloatArray
 
-    def __call__(self, motif: int | None) -> FloatArray:
-        """(N,) propensities without the motif of this catalogue index (None: from them all)."""
-        from twicetold.references.propensity import recorded_propensity
-
-        return recorded_propensity(self.attested, motif) / self.exposure
+    def __call__(self, motif: int) -> FloatArray:
+        """(N,) propensities for the motif with this catalogue index."""
+        out = self.common.copy()
+        held = self.attested.indices[self.attested.indptr[motif] : self.attested.indptr[motif + 1]]
+        out[held] = self.lowered[held]
+        return out
 
 
 @dataclass(frozen=True)
@@ -83,20 +89,17 @@ def group_propensity(study: Study, group: Group) -> GroupPropensity:
 
 def _recorded(study: Study, group: Group) -> GroupPropensity:
     """Row totals; for a motif, without its own record (or it would explain itself)."""
-    surveyed = _surveyed(study, group)
-    own = WithoutOwnRecord(
-        study.catalogue.attested[:, group.traditions], surveyed / max(surveyed.max(initial=1), 1)
-    )
-    return GroupPropensity(own(None), own)
+    from twicetold.references.saturation import recorded_rates
 
-
-def _surveyed(study: Study, group: Group) -> npt.NDArray[np.int64]:
-    """(N,) motifs searched for in each tradition of a group, at least the group's own."""
     catalogue = study.catalogue
-    surveyed = np.zeros(group.n, dtype=np.int64)
-    for k, mask in enumerate(catalogue.surveyed_sets):
-        surveyed += mask[group.traditions] * int((catalogue.surveyed_of == k).sum())
-    return surveyed
+    sets = np.array(catalogue.surveyed_sets)
+    found = recorded_rates(catalogue.attested, sets, catalogue.surveyed_of)
+    own = WithoutOwnRecord(
+        catalogue.attested[:, group.traditions],
+        found.common[group.traditions],
+        found.lowered[group.traditions],
+    )
+    return GroupPropensity(own.common, own)
 
 
 def _covariates(study: Study, group: Group) -> GroupPropensity:
@@ -107,10 +110,35 @@ def _covariates(study: Study, group: Group) -> GroupPropensity:
         {c: catalogue.covariates[c][group.traditions] for c in study.plan.emergence.covariates}
     )
     effort = None if catalogue.effort is None else catalogue.effort[group.traditions]
-    held = np.asarray(catalogue.attested[:, group.traditions].sum(axis=0)).ravel()
-    fit = covariate_propensity(held, frame, effort, _surveyed(study, group))
+    held, searched = _by_commonness(study, group)
+    fit = covariate_propensity(held, frame, effort, searched)
     return GroupPropensity(
         fit.propensity,
         fits={"covariates": fit.summary()},
         tables={"propensity_fit": fit.to_frame()},
     )
+
+
+def _by_commonness(study: Study, group: Group) -> tuple[IntArray, IntArray]:
+    """(C, N) motifs held, and searched for, by classes of about equally common motifs.
+
+    Common motifs saturate and rare ones do not, so each class has a time of its own in the fit.
+    """
+    catalogue = study.catalogue
+    held = np.diff(catalogue.attested.indptr)
+    sizes = np.array([mask.sum() for mask in catalogue.surveyed_sets])[catalogue.surveyed_of]
+    told = (held > 0) & (held < sizes)
+    # Classes by a constant factor of holders; from 1 up, so that none is empty by construction.
+    code = np.floor(np.log(np.maximum(held, 1)) / np.log(CLASS_WIDTH) + 1e-9).astype(np.int64)
+    classes = np.unique(code[told])
+    if not len(classes):
+        classes, told = np.unique(code), np.ones(len(held), dtype=bool)
+    counts = np.zeros((len(classes), group.n), dtype=np.int64)
+    searched = np.zeros_like(counts)
+    for k, one in enumerate(classes):
+        mine = told & (code == one)
+        rows = catalogue.attested[np.flatnonzero(mine)][:, group.traditions]
+        counts[k] = np.asarray(rows.sum(axis=0, dtype=np.int64)).ravel()
+        for s, mask in enumerate(catalogue.surveyed_sets):
+            searched[k] += mask[group.traditions] * int((mine & (catalogue.surveyed_of == s)).sum())
+    return counts, searched

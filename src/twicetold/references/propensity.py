@@ -64,7 +64,7 @@ class CovariateFit:
     propensity : (N,) float64
         Fitted clock rates, exp(linear predictor), effort included.
     names : tuple of str
-        ``(intercept)`` and the covariates.
+        ``(intercept)``, or one constant for each class of motifs, and the covariates.
     coefficients, se : (P,) float64
         In the covariates' own units; standard errors as if the counts were binomial.
     deviance : float
@@ -130,17 +130,18 @@ def covariate_propensity(
               \log \lambda_i = \log \mathrm{effort}_i + \beta_0 + x_i^\top \beta
 
     is a GLM with complementary log-log link (McCullagh & Nelder 1989, Generalized Linear Models,
-    section 4.3), fitted by statsmodels.
+    section 4.3), fitted by statsmodels. Motifs of several classes (about equally common ones) each
+    have a constant of their own: the time they were looked at.
 
     Parameters
     ----------
-    attested : (N,) int
-        Motifs held.
+    attested : (N,) or (C, N) int
+        Motifs held, of each class.
     covariates : pandas.DataFrame of N rows
         One numeric column per covariate.
     effort : (N,) float or None
         Relative effort, > 0; None leaves the offset out.
-    surveyed : (N,) int
+    surveyed : (N,) or (C, N) int
         Motifs searched for; traditions with 0 do not enter the fit but get a propensity.
 
     Raises
@@ -149,27 +150,40 @@ def covariate_propensity(
         When a covariate is missing somewhere, constant, a combination of others, or separates
         traditions that hold nothing (or everything) from the rest; or counts cannot be used.
     """
-    held, trials = np.asarray(attested, dtype=np.int64), np.asarray(surveyed, dtype=np.int64)
+    held = np.atleast_2d(np.asarray(attested, dtype=np.int64))
+    trials = np.atleast_2d(np.asarray(surveyed, dtype=np.int64))
     _check_counts(held, trials)
     names = tuple(str(c) for c in covariates.columns)
     columns = _checked_columns(covariates, names)
-    offset = np.zeros(len(held)) if effort is None else _log_effort(effort)
+    offset = np.zeros(len(columns)) if effort is None else _log_effort(effort)
+    if not held.shape[1] == len(columns) == len(offset):
+        raise PropensityError(
+            f"Counts, covariates and effort must have one entry per tradition, got "
+            f"{held.shape[1]}, {len(columns)} and {len(offset)}."
+        )
     centre, spread = columns.mean(axis=0), columns.std(axis=0)
-    design = np.column_stack([np.ones(len(held)), (columns - centre) / spread])
-    used = trials > 0
-    _check_design(design[used], names)
-    _check_separation(design[used], held[used], trials[used], names)
-    fit = _fit(held[used], trials[used], design[used], offset[used])
+    standard = (columns - centre) / spread
+    searched = trials.sum(axis=0) > 0
+    _check_design(np.column_stack([np.ones(searched.sum()), standard[searched]]), names)
+    which, where = np.nonzero(trials)  # one row of the fit for each class and tradition
+    constants = np.eye(len(held))[which]
+    design = np.column_stack([constants, standard[where]])
+    counts = (held[which, where], trials[which, where])
+    _check_separation(design, *counts, names)
+    fit = _fit(*counts, design, offset[where], len(held))
     # Back from standard units: beta = turn @ gamma.
-    turn = np.diag(np.concatenate([[1.0], 1.0 / spread]))
-    turn[0, 1:] = -centre / spread
+    classes, gamma = len(held), np.asarray(fit.params)
+    turn = np.diag(np.concatenate([np.ones(classes), 1.0 / spread]))
+    turn[:classes, classes:] = -centre / spread
     covariance = turn @ np.asarray(fit.cov_params()) @ turn.T
-    rates = np.exp(design @ np.asarray(fit.params) + offset)
+    constant = float(np.average(gamma[:classes], weights=trials.sum(axis=1)))
+    rates = np.exp(constant + standard @ gamma[classes:] + offset)
     rates.flags.writeable = False
+    own = ("(intercept)",) if classes == 1 else tuple(f"(class {k + 1})" for k in range(classes))
     return CovariateFit(
         propensity=rates,
-        names=("(intercept)", *names),
-        coefficients=turn @ np.asarray(fit.params),
+        names=(*own, *names),
+        coefficients=turn @ gamma,
         se=np.sqrt(np.diag(covariance)),
         deviance=float(fit.deviance),
         dispersion=float(fit.pearson_chi2 / fit.df_resid),
@@ -180,7 +194,7 @@ def covariate_propensity(
 
 
 def _check_counts(held: npt.NDArray[np.int64], trials: npt.NDArray[np.int64]) -> None:
-    if held.shape != trials.shape or held.ndim != 1:
+    if held.shape != trials.shape or held.ndim != 2:
         raise PropensityError(
             f"`attested` and `surveyed` must have one entry per tradition, got {held.shape} and "
             f"{trials.shape}."
@@ -275,7 +289,9 @@ def _check_separation(
         method="highs",
     )
     if found.status == 0 and -found.fun > 1e-6:
-        guilty = [n for n, b in zip(names, found.x[1:], strict=True) if abs(b) > 1e-6]
+        guilty = [
+            n for n, b in zip(names, found.x[-len(names) :], strict=True) if abs(b) > 1e-6
+        ] or list(names)
         raise PropensityError(
             "Covariates must not part the traditions that hold nothing (or everything) from the "
             f"rest, but {', '.join(repr(g) for g in guilty)} does: its coefficient would be "
@@ -288,6 +304,7 @@ def _fit(
     trials: npt.NDArray[np.int64],
     design: FloatArray,
     offset: FloatArray,
+    classes: int,
 ) -> Any:
     """Fit by iteratively reweighted least squares; anything but convergence is refused."""
     import statsmodels.api as sm
@@ -300,7 +317,10 @@ def _fit(
     )
     start = np.zeros(design.shape[1])
     # From the pooled rate: IRLS from statsmodels' own start can step out of bounds here.
-    start[0] = np.log(-np.log1p(-held.sum() / trials.sum())) - np.average(offset, weights=trials)
+    for k in range(classes):
+        mine = design[:, k] == 1.0
+        share = np.clip(held[mine].sum() / trials[mine].sum(), 1e-9, 1 - 1e-9)
+        start[k] = np.log(-np.log1p(-share)) - np.average(offset[mine], weights=trials[mine])
     with warnings.catch_warnings():
         warnings.simplefilter("ignore")
         # The deviance grows with the catalogue: what counts as settled must grow with it.
