@@ -303,13 +303,18 @@ def against_ancestry(study: Study, observed: ObservedMotifs, pool: Pool) -> Worl
             plural = {"branch": "branches", "family": "families"}[what]
             said = f"{informative} {what if informative == 1 else plural} carry information"
             comparisons[motif] = (_with_note(made, said.replace("family carry", "family carries")),)
-    notes: tuple[str, ...] = ()
+    notes: list[str] = []
     if silent:
-        notes = (
+        notes.append(
             f"For {silent:,} motifs the numbers held per {study.plan.ancestry.level} leave nothing "
-            "to chance, so ancestry could not be set against contact.",
+            "to chance, so ancestry could not be set against contact."
         )
-    return WorldResult(comparisons, notes=notes)
+    if study.plan.ancestry.level == "family" and not study.catalogue.has_branches:
+        notes.append(
+            "No branches are named, so kin near and far count alike within a family. Where near "
+            "kin live together at a border, inheritance can pass for contact a little too often."
+        )
+    return WorldResult(comparisons, notes=tuple(notes))
 
 
 def _with_note(comparison: Comparison, note: str) -> Comparison:
