@@ -71,20 +71,18 @@ def sweep(order, start, stop, column, indptr, indices, family, work, kin, epoch,
             kin_link[f] = -1
             strands += 1
         degree_sum += degree[v]
-        # Neighbours that hold, and those of another family, are gathered without a branch.
+        # Neighbours that hold are gathered without a branch; only they are asked their family.
         met = 0
-        apart = 0
         for e in range(np.uint32(indptr[v]), np.uint32(indptr[v + np.uint32(1)])):
             u = np.uint32(indices[e])
             near[met] = np.int32(u)
-            held = mark[u] == epoch
-            met += 1 if held else 0
-            apart += 1 if held & (np.uint32(family[u]) != f) else 0
+            met += 1 if mark[u] == epoch else 0
         joins += met
-        cross += apart
         root = v
         for j in range(met):
             u = np.uint32(near[j])
+            g = np.uint32(family[u])
+            cross += 1 if g != f else 0
             other = _root(link, u)
             if other == root:
                 continue
@@ -98,7 +96,6 @@ def sweep(order, start, stop, column, indptr, indices, family, work, kin, epoch,
             link[root] = size
             clusters -= 1
             largest = max(largest, -size)
-            g = np.uint32(family[u])
             if g != f:
                 # A strand is whole families, so its union-find runs over families; a join inside
                 # one cluster can never merge strands.
