@@ -37,10 +37,10 @@ World = Literal["contact", "transmission"]
 #: Inheritance shares over which transmission-only takes its worst case.
 INHERITANCE = (0.0, 0.25, 0.5, 0.75, 1.0)
 #: Reweighting to another turnover must keep this part of the effective draws; else it is walked.
-KEEP = 0.25
+KEEP = 0.4
 #: Worlds beside the first (other inheritance shares and recordings) get this part of the walks, and
-#: may grow to this many times it: of 10,000 walks, that leaves them some 1,300 effective draws.
-BESIDE, BESIDE_GROWTH = 0.25, 2
+#: may grow to this many times it: of 10,000 walks, that leaves them some 2,000 effective draws.
+BESIDE, BESIDE_GROWTH = 0.4, 2
 #: World -> (statistic, direction), the primary one first.
 MEASURES: dict[World, tuple[tuple[str, Literal["many", "few"]], ...]] = {
     "contact": (("joins", "few"), ("strands", "many")),
@@ -234,7 +234,7 @@ def scatter_worlds(
 
     One world is walked for each inheritance share and recording, at the fitted turnover; the other
     turnovers of the confidence set reuse its walks by reweighting, count by count, and are walked
-    themselves only where less than a quarter of the effective draws would be left. The law of a
+    themselves only where less than four tenths of the effective draws would be left. The law of a
     count depends on no other count. Only laws are kept, never walks.
 
     Parameters
