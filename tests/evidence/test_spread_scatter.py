@@ -10,6 +10,7 @@ from twicetold.evidence.scatter import Transmission, at_reach, scatter_worlds
 from twicetold.references.pvalue import p_few, p_many
 from twicetold.spread.recording import recorded_probability
 from twicetold.spread.turnover import log_series
+from twicetold.spread.world import scatter_score
 from zoo import as_contact_graph, small_graphs
 
 PATH5 = [(0, 1), (1, 2), (2, 3), (3, 4)]
@@ -64,10 +65,32 @@ def test_worst_case_is_over_everything():
     assert worlds.settings[0].turnover == 0.8
     by_hand = max(float(p_many(s.law("strands", 4), 2)) for s in worlds.settings)
     assert worlds.p("transmission", "strands", 4, 2) == pytest.approx(by_hand + BETA)
+    score = int(scatter_score(2, 1, 4))
+    by_hand = max(float(p_many(s.law("scatter", 4), score)) for s in worlds.settings)
+    assert worlds.p_scatter(4, joins=1, strands=2) == pytest.approx(by_hand + BETA)
+    primary = worlds.compare(4, joins=1, strands=2)[2]
+    assert (primary.statistic, primary.observed, primary.primary) == ("strands", 2, True)
+    assert primary.p == worlds.p_scatter(4, joins=1, strands=2)
     contact = max(float(p_few(s.law("joins", 4), 2)) for s in worlds.settings if s.inheritance == 0)
     assert worlds.p("contact", "joins", 4, 2) == pytest.approx(contact + BETA)
     assert worlds.p("transmission", "joins", 4, 2) >= worlds.p("contact", "joins", 4, 2)
     assert worlds.p("contact", "joins", 4, 4) == 1.0
+
+
+def test_joins_break_the_ties_of_strands():
+    # More strands always come first; among as many, fewer joins; and no tail is heavier for it.
+    assert np.all(np.diff(scatter_score([1, 1, 1, 2, 2], [5, 1, 0, 40, 3], 10)) > 0)
+    assert scatter_score(3, 200, 10) == scatter_score(3, 31, 10)  # the last class is open
+    assert scatter_score(3, 7, 64) == scatter_score(3, 4, 64)  # a sixteenth of 64 holders wide
+    n, edges = small_graphs()["grid3"]
+    what = Transmission(as_contact_graph(n, edges), fixed(0.9), np.arange(n) // 3, walks=3000)
+    worlds = scatter_worlds(what, [4], largest=6)
+    for strands in (1, 2, 3):
+        p = [worlds.p_scatter(4, joins=j, strands=strands) for j in (0, 1, 2, 3, 4)]
+        assert p == sorted(p)
+        plain = worlds.p("transmission", "strands", 4, strands)
+        more = worlds.p("transmission", "strands", 4, strands + 1)
+        assert all(more - 1e-12 <= q <= plain + 1e-12 for q in p)
 
 
 def test_far_turnovers_are_walked():

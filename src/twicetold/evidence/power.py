@@ -118,7 +118,7 @@ class Judge:
             grounds = Grounds(
                 emergence=float(p_many(law, int(joins[k]))) if told else float("nan"),
                 ancestry=ancestry[k],
-                transmission=self.worlds.p("transmission", "strands", n, int(strands[k])),
+                transmission=self.worlds.p_scatter(n, joins=int(joins[k]), strands=int(strands[k])),
                 attainable=attainable,
                 families=self.study.families,
                 transmission_known=True,

@@ -4,7 +4,8 @@
 proportion (a grid of inheritance shares); no second invention unless nobody is left to tell it to.
 Both p-values are the worst case over what the fits leave open (:mod:`.confidence`), and the second
 over the inheritance share as well. Many strands is the primary measure of scatter against
-transmission, few joins against contact (which knows no families); each stands beside the other.
+transmission, with ties broken by fewer joins (:func:`twicetold.spread.world.scatter_score`); few
+joins against contact (which knows no families); each stands beside the other.
 
 Weighted draws become a p by :mod:`twicetold.references.pvalue`: their share times their effective
 number, the observed motif counting as one effective draw more.
@@ -12,7 +13,7 @@ number, the observed motif counting as one effective draw more.
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field, fields, replace
 from typing import Literal
 
@@ -27,7 +28,7 @@ from twicetold.graph import ContactGraph
 from twicetold.references.law import Law
 from twicetold.references.pvalue import p_few, p_many
 from twicetold.spread.chain import SpreadModel
-from twicetold.spread.world import GROWTH, SpreadWorld, spread_world
+from twicetold.spread.world import CLASSES, GROWTH, SpreadWorld, scatter_score, spread_world
 from twicetold.workers import Pool
 
 FloatArray = npt.NDArray[np.float64]
@@ -41,11 +42,13 @@ KEEP = 0.4
 #: Worlds beside the first (other inheritance shares and recordings) get this part of the walks, and
 #: may grow to this many times it: of 10,000 walks, that leaves them some 2,000 effective draws.
 BESIDE, BESIDE_GROWTH = 0.4, 2
-#: World -> (statistic, direction), the primary one first.
-MEASURES: dict[World, tuple[tuple[str, Literal["many", "few"]], ...]] = {
-    "contact": (("joins", "few"), ("strands", "many")),
-    "transmission": (("strands", "many"), ("joins", "few")),
+#: World -> statistics, the one that decides first.
+MEASURES: dict[World, tuple[str, ...]] = {
+    "contact": ("joins", "strands"),
+    "transmission": ("scatter", "joins"),
 }
+#: The side of each statistic that is more scattered.
+SIDES: dict[str, Literal["many", "few"]] = {"joins": "few", "strands": "many", "scatter": "many"}
 
 
 @dataclass(frozen=True)
@@ -148,11 +151,12 @@ class ScatterWorlds:
             Four: two measures against contact, then two against transmission. ``law`` and
             ``expected`` are those of the worst case.
         """
-        observed = {"joins": joins, "strands": strands}
+        score = int(scatter_score(strands, joins, count))
+        observed = {"joins": joins, "strands": strands, "scatter": score}
         return tuple(
-            self._one(world, statistic, direction, count, observed[statistic], k == 0)
+            self._one(world, statistic, count, observed)
             for world, measures in MEASURES.items()
-            for k, (statistic, direction) in enumerate(measures)
+            for statistic in measures
         )
 
     def p(self, world: World, statistic: str, count: int, value: int) -> float:
@@ -162,40 +166,52 @@ class ScatterWorlds:
             return float("nan")
         return float(min(1.0, tail.p[min(value, len(tail.p) - 1)] + self.beta))
 
-    def _one(  # noqa: PLR0917
-        self,
-        world: World,
-        statistic: str,
-        direction: Literal["many", "few"],
-        count: int,
-        value: int,
-        first: bool,
+    def p_scatter(self, count: int, *, joins: int, strands: int) -> float:
+        """Worst-case p against transmission of a motif: strands, ties broken by joins."""
+        return self.p("transmission", "scatter", count, int(scatter_score(strands, joins, count)))
+
+    def _one(
+        self, world: World, statistic: str, count: int, observed: Mapping[str, int]
     ) -> Comparison:
+        # What is shown of the scatter is its strands; the joins only break ties.
+        shown = "strands" if statistic == "scatter" else statistic
+        direction, first = SIDES[statistic], statistic == MEASURES[world][0]
+        seen, value = observed[shown], observed[statistic]
         tail = self._tail(world, statistic, count)
         if not tail.laws:
             nan = float("nan")
             note = f"No walk came by {count} recorded holders."
-            return Comparison(world, statistic, direction, value, nan, nan, nan, first, None, note)
+            return Comparison(world, shown, direction, seen, nan, nan, nan, first, None, note)
         k = int(tail.worst[min(value, len(tail.p) - 1)])
-        setting, law = tail.settings[k], tail.laws[k]
-        extreme = max(min(count, self.families), value) if direction == "many" else 0
+        setting = tail.settings[k]
+        law = setting.law(shown, count)
+        assert law is not None  # laws of a count are there together or not at all
         said = [f"worst case at turnover {setting.turnover:.4g}"]
+        if statistic == "scatter":
+            said.insert(0, "ties broken by fewer joins")
         if world == "transmission" and self.kin:
             said.append(f"inheritance share {setting.inheritance:g}")
         if np.isfinite(setting.kappa):
             said.append(f"recording rate {setting.kappa:.4g}")
         return Comparison(
             world=world,
-            statistic=statistic,
+            statistic=shown,
             direction=direction,
-            observed=value,
+            observed=seen,
             expected=law.mean(),
             p=self.p(world, statistic, count, value),
-            p_attainable=self.p(world, statistic, count, extreme),
+            p_attainable=self.p(world, statistic, count, self._extreme(statistic, count, value)),
             primary=first,
             law=law,
             note=", ".join(said),
         )
+
+    def _extreme(self, statistic: str, count: int, value: int) -> int:
+        """Most scattered value a motif of this count could show."""
+        most = min(count, self.families)
+        if statistic == "scatter":
+            return max(int(scatter_score(most, 0, count)), value)
+        return max(most, value) if statistic == "strands" else 0
 
     def _tail(self, world: World, statistic: str, count: int) -> _Tail:
         key = (world, statistic, count)
@@ -204,7 +220,7 @@ class ScatterWorlds:
         return self._tails[key]
 
     def _make_tail(self, world: World, statistic: str, count: int) -> _Tail:
-        direction = dict(MEASURES[world])[statistic]
+        direction = SIDES[statistic]
         settings, laws = [], []
         for setting in self.settings:
             if world == "contact" and setting.inheritance > 0.0:
@@ -311,7 +327,7 @@ class _Walks:
             "largest": self.largest,
             "walks": self.walks,
             "seed": self.what.seed,
-            "design": (KEEP, KEPT, GROWTH, BESIDE_GROWTH),
+            "design": (KEEP, KEPT, CLASSES, GROWTH, BESIDE_GROWTH),
         }
 
 

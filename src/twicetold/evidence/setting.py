@@ -13,7 +13,7 @@ from twicetold.evidence.confidence import Point
 from twicetold.references.law import Law
 
 #: Statistics whose laws are kept; the clusters are for pictures.
-KEPT = ("joins", "strands", "clusters")
+KEPT = ("joins", "strands", "clusters", "scatter")
 
 
 @dataclass(frozen=True)

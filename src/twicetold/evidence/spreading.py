@@ -301,6 +301,8 @@ def _powers(
                 rejecting = np.asarray(p_many(joins, contact.values)) <= alpha
                 a = float(contact.weights[rejecting].sum() / contact.total)
             if strands is not None:
+                # Ties are left unbroken, since the emergence-only law is of strands alone: the
+                # power told is a little less than the true one.
                 told = [worlds.p("transmission", "strands", n, int(v)) for v in strands.values]
                 b = float(strands.weights[np.array(told) <= alpha].sum() / strands.total)
             known[n] = (a, b)
