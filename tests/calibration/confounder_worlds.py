@@ -16,7 +16,7 @@ from twicetold.spread import SpreadModel, cap_for, chain_tables, walk_chunk
 
 N, FAMILIES = 1000, 60
 COUNTS = (5, 10, 30, 100)
-EACH = 3000
+EACH = 2000
 #: Chance that a gain is a new origin, and that it passes over the branch to the whole family.
 ORIGIN, CLIMB = 0.15, 0.15
 KM = 6371.0088
