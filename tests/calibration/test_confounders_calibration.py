@@ -272,9 +272,9 @@ def worst_line(cases, column):
             continue
         flags = (case.table[f"p_against_{column}"] <= 0.05).to_numpy(float)
         n, share = max(((n, case.share(flags, n)[0]) for n in made.COUNTS), key=lambda x: x[1])
-        if share > 0.05:
+        if share >= 0.05:
             said.append(f"{case.world} seen with {case.tool}: {100 * share:.0f} % at {n} holders")
-    return "Above 5 % where this reference is not the truth: " + "; ".join(said) + "."
+    return "At 5 % or more where this reference is not the truth: " + "; ".join(said) + "."
 
 
 def heads(*names):
