@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import os
+import re
 import shutil
 import tempfile
 import time
@@ -18,6 +19,7 @@ from small_world import put, small_world
 from twicetold.errors import GraphError, PlanError, TwicetoldError
 from twicetold.graph.exchange import read_neighbours
 from twicetold.plan import Plan, plan_from_mapping, read_plan, recorded_order
+from twicetold.report.common import page_name
 from twicetold.run import rank_run, supplement_run
 from twicetold.workers import ThreadPool
 
@@ -49,7 +51,7 @@ VALUES = st.recursive(
     ),
     max_leaves=5,
 )
-SECTIONS = st.one_of(st.sampled_from(sorted(Plan().to_mapping())), st.text(max_size=8))
+SECTIONS = st.one_of(*[st.sampled_from(sorted(Plan().to_mapping()))] * 3, st.text(max_size=8))
 KEYS = st.one_of(
     st.sampled_from(sorted({k for v in Plan().to_mapping().values() for k in v})),
     st.text(max_size=8),
@@ -229,6 +231,54 @@ def test_folder_or_nothing_in_place_of_a_file(tmp_path):
     assert answer(read_neighbours, tmp_path / "none.gal", ["a"])
     assert answer(read_neighbours, "nul\x00.gal", ["a"])
     assert answer(read_plan, "nul\x00.toml")
+
+
+# ---- ids as file names ---------------------------------------------------------------------------
+
+IDS = st.one_of(
+    st.text(max_size=300),
+    st.sampled_from(
+        [
+            "../../etc",
+            "/",
+            "\\",
+            "nul",
+            "COM1",
+            ".",
+            "..",
+            "a\x00b",
+            "a.",
+            " a",
+            "~",
+            "%2e%2e",
+            "-rf",
+        ]
+    ),
+    st.text(alphabet="abcABC-_.012/\\", max_size=20),
+)
+
+
+def fuzz_names(ids) -> None:
+    names = [page_name(motif) for motif in ids]
+    for name in names:
+        assert re.fullmatch(r"[a-z0-9][a-z0-9_-]*\.html", name), name
+        assert len(name) <= 100
+        assert not re.fullmatch(r"(con|prn|aux|nul|com[0-9]|lpt[0-9])\.html", name)
+    assert len(set(names)) == len(ids)
+    counted("motif ids as file names", "")
+
+
+@given(ids=st.lists(IDS, max_size=6, unique=True))
+@settings(FEW, max_examples=200)
+def test_any_ids_as_file_names(ids):
+    fuzz_names(ids)
+
+
+@pytest.mark.calibration
+@given(ids=st.lists(IDS, max_size=6, unique=True))
+@settings(MANY, max_examples=10_000)
+def test_very_many_ids_as_file_names(ids):
+    fuzz_names(ids)
 
 
 # ---- run folders -------------------------------------------------------------------------------
