@@ -192,6 +192,7 @@ def test_sentences_say_the_number_and_the_unknown():
     assert "4.2 times" in said
     assert "0.70 to 0.96" in said
     assert "5 % of the time" in said
+    assert "about 490 times" in hidden_sentence({**bound, "ratio": 487.3})
     assert "more than 4" in hidden_sentence({**bound, "log_sd_high": np.inf})
     assert hidden_sentence({**bound, "log_sd": 0.0}).startswith("No hidden environment is needed")
     assert hidden_sentence({**bound, "log_sd": np.inf}).startswith("No smooth unmeasured")

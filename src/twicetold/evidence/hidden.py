@@ -448,10 +448,12 @@ def hidden_sentence(bound: dict[str, float], alpha: float = 0.05) -> str:
             f"many joins more than {share} of the time."
         )
     high = bound["log_sd_high"]
+    ratio = float(f"{bound['ratio']:.2g}")
+    times = f"{ratio:,g}"
     upper = f"{high:.2f}" if math.isfinite(high) else f"more than {LARGEST:g}"
     return (
         f"An environment that nobody measured, varying smoothly over about {length}, would have to "
-        f"make the most favoured region about {bound['ratio']:.2g} times as ready to bring forth "
+        f"make the most favoured region about {times} times as ready to bring forth "
         f"this motif as the least favoured one (log-sd {bound['log_sd']:.2f}, interval "
         f"{bound['log_sd_low']:.2f} to {upper}) for emergence alone to give this many joins "
         f"{share} of the time."

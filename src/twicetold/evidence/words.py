@@ -79,9 +79,39 @@ def tell(ranking: Ranking, evidence: MotifEvidence) -> str:
             )
             lines.append(f"Route shares, 90 % intervals: {said}.")
         lines.append("")
+    beside = _beside(ranking, evidence)
+    lines += [*beside, ""] if beside else []
     lines += [f"Note: {note}" for note in ranking.notes]
     lines.append(CAUTION)
     return "\n".join(lines)
+
+
+def _beside(ranking: Ranking, evidence: MotifEvidence) -> list[str]:
+    """How far to trust it, and who goes along: a line for each that was computed."""
+    from twicetold.evidence.hidden import hidden_sentence
+
+    lines = []
+    if evidence.hidden_bound:
+        lines.append(hidden_sentence(dict(evidence.hidden_bound), ranking.plan.evidence.alpha))
+    if evidence.stability is not None and len(evidence.stability):
+        same = int((evidence.stability["verdict"] == evidence.row["verdict"]).sum())
+        lines.append(
+            f"The same verdict comes out in {same} of {len(evidence.stability)} other runs."
+        )
+    if evidence.pairs is not None and len(evidence.pairs):
+        names = [
+            f"{n} ({k})"
+            for n, k in zip(
+                evidence.pairs["name"].head(5), evidence.pairs["shared"].head(5), strict=True
+            )
+        ]
+        more = len(evidence.pairs) - len(names)
+        lines.append(
+            "On the same traditions more than both margins explain (traditions shared): "
+            + ", ".join(names)
+            + (f" and {more} more." if more > 0 else ".")
+        )
+    return lines
 
 
 def tell_power(table: PowerTable) -> str:
