@@ -269,7 +269,7 @@ class TestHistory:
 
     def test_records_follow_effort(self):
         world = make_example()
-        chance = np.array([-np.expm1(-0.04 * s.effort) for s in world.peoples.sites])
+        chance = np.array([-np.expm1(-0.06 * s.effort) for s in world.peoples.sites])
         expected = found = spread = 0.0
         for motif in world.motifs:
             p = chance[[i for i in motif.holders if motif.searched[i]]]

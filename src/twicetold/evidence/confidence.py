@@ -23,7 +23,7 @@ from twicetold.spread.turnover import TurnoverFit, fit_turnover
 FloatArray = npt.NDArray[np.float64]
 
 #: Error rate of the confidence set, given away in full by every p-value that uses it.
-BETA = 0.001
+BETA = 1e-4
 #: Recording fits whose mean recording probabilities lie closer than this count as one.
 SAME_RECORDING = 0.02
 

@@ -17,9 +17,9 @@ import numpy.typing as npt
 from twicetold.example._dice import Dice
 from twicetold.example._peoples import Site
 
-TURNOVER = 0.93
+TURNOVER = 0.9
 """Gains per loss, x."""
-RECORDING = 0.04
+RECORDING = 0.06
 """κ: a holder is recorded with probability 1 - exp(-κ · effort)."""
 NEIGHBOURS = 6
 """Contact goes to the nearest six, both ways, and along bridges between separate pieces."""
@@ -29,7 +29,7 @@ LEAST_RECORDED = 3
 """Motifs recorded fewer times than this never made it into the catalogue."""
 SPAN = 300.0
 """Motifs appeared at a constant rate over this long, in mean lives of one holding. The chance
-that one lives longer is (1 - x) / (exp((1 - x) · SPAN) - x), about 5e-11 (Kendall 1948)."""
+that one lives longer is (1 - x) / (exp((1 - x) · SPAN) - x), about 1e-14 (Kendall 1948)."""
 ROUTES = ("emergence", "contact", "inheritance")
 Shares = tuple[float, float, float]
 _PURE: dict[str, Shares] = {
