@@ -17,8 +17,9 @@ import pytest
 from statsmodels.stats.proportion import proportion_confint
 
 from made_up import catalogue_of
-from twicetold.evidence.hidden import Search, hidden_bounds, smooth_field
+from twicetold.evidence.hidden import Search, hidden_bounds
 from twicetold.evidence.ranking import compute_worlds, judge
+from twicetold.evidence.smooth import smooth_field
 from twicetold.evidence.study import prepare
 from twicetold.evidence.verdict import CONTACT, CONTACT_OR_ANCESTRY
 from twicetold.evidence.worlds import observe_motifs

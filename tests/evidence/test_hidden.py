@@ -8,15 +8,14 @@ import pytest
 from twicetold.errors import TwicetoldError
 from twicetold.evidence import _hidden_kernels as kernels
 from twicetold.evidence import _hidden_plain as plain
-from twicetold.evidence import hidden
+from twicetold.evidence import hidden, smooth
 from twicetold.evidence.hidden import (
     Search,
-    family_extent_km,
     hidden_bounds,
     hidden_sensitivity,
     hidden_sentence,
-    smooth_field,
 )
+from twicetold.evidence.smooth import family_extent_km, smooth_field
 from twicetold.graph import build_graph, great_circle_km
 from twicetold.randomness import Stream, chunk_words
 from twicetold.references.emergence import emergence_world
@@ -73,10 +72,10 @@ def test_fields_have_the_covariance_stated(globe, length, monkeypatch):
     stated = np.exp(-((chord / length) ** 2))
     field = smooth_field(lat, lon, length)
     assert np.allclose(field.factor @ field.factor.T, stated, atol=2e-4)
-    monkeypatch.setattr(hidden, "DENSE", 10)
+    monkeypatch.setattr(smooth, "DENSE", 10)
     thin = smooth_field(lat, lon, length)
     assert np.allclose(thin.factor @ thin.factor.T, stated, atol=2e-4)
-    monkeypatch.setattr(hidden, "MOST_COLUMNS", 20)
+    monkeypatch.setattr(smooth, "MOST_COLUMNS", 20)
     coarse = smooth_field(lat, lon, 500.0)
     total = coarse.factor @ coarse.factor.T + np.diag(coarse.noise**2)
     assert np.diag(total) == pytest.approx(np.ones(150))
@@ -180,7 +179,7 @@ def test_extent_of_families():
     assert family_extent_km(lat, lon, [0, 0, 0, 1, 1]) == pytest.approx(
         (3 + 40) / 2 * 111.19508, rel=1e-6
     )
-    assert family_extent_km(lat, lon, [0, 1, 2, 3, 4]) == hidden.DEFAULT_KM
+    assert family_extent_km(lat, lon, [0, 1, 2, 3, 4]) == smooth.DEFAULT_KM
 
 
 def test_sentences_say_the_number_and_the_unknown():

@@ -7,7 +7,8 @@ import pytest
 
 from made_up import catalogue_of
 from twicetold.evidence import rank_catalogue, test_motif
-from twicetold.evidence.hidden import Search, family_extent_km, hidden_bounds, smooth_field
+from twicetold.evidence.hidden import Search, hidden_bounds
+from twicetold.evidence.smooth import family_extent_km, smooth_field
 from twicetold.evidence.unmeasured import DRAWS
 from twicetold.graph import contact_graph
 from twicetold.plan import Plan

@@ -9,14 +9,9 @@ import numpy as np
 import numpy.typing as npt
 import pandas as pd
 
-from twicetold.evidence.hidden import (
-    HiddenBounds,
-    Search,
-    family_extent_km,
-    hidden_bounds,
-    smooth_field,
-)
+from twicetold.evidence.hidden import HiddenBounds, Search, hidden_bounds
 from twicetold.evidence.propensities import group_propensity
+from twicetold.evidence.smooth import family_extent_km, smooth_field
 from twicetold.evidence.study import Group, Study
 from twicetold.evidence.worlds import ObservedMotifs
 from twicetold.graph import regions
