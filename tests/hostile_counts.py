@@ -29,7 +29,7 @@ def counted(reader: str, said: str) -> None:
     SLOWEST["next"] = 0.0
 
 
-def write_counts(least: int = 299) -> None:
+def write_counts(least: int = 250) -> None:
     """Put the counts of this run into the report's table, beside those of other readers."""
     if not REPORT.exists():
         return

@@ -279,7 +279,8 @@ def _inside(url: object, folder: Path, notes: Notes) -> Path | None:
     for name in (url, url + ".zip"):
         try:
             path = (folder / name).resolve()
-        except (OSError, RuntimeError, ValueError):
+            there = path.is_file()
+        except (OSError, RuntimeError, ValueError):  # a name no file can have
             continue
         if not path.is_relative_to(root):
             Spot(notes, "CLDF metadata").error(
@@ -288,7 +289,7 @@ def _inside(url: object, folder: Path, notes: Notes) -> Path | None:
                 "Put the file itself beside the metadata file.",
             )
             return None
-        if path.is_file():
+        if there:
             return path
     Spot(notes, "CLDF metadata").error(
         "missing table",
