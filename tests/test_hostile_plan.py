@@ -96,8 +96,11 @@ def answer(function, *args, kinds=(TwicetoldError,), **kw):
         function(*args, **kw)
     except kinds as err:
         said = str(err)
-        assert said
-        assert len(said) < 2_000, len(said)
+        # Problems of a catalogue are collected, each a line of its own.
+        parts = list(map(str, getattr(err, "problems", [said])))
+        assert parts
+        assert len(parts) < 500
+        assert all(0 < len(part) < 2_000 for part in parts), said
         assert said.replace("\n", "").isprintable(), said
         said.encode("utf-8")
     finally:
