@@ -9,6 +9,7 @@ offers: esda and spdep for Moran's I and for joins, one call each; the loop by h
 Moran's I; twicetold always counts all seven statistics. The whole catalogue of 2,200 motifs is in
 ``emergence.md``, beside the same loop with draws shared among motifs of a count.
 """
+# ruff: noqa: E501 (the report's prose)
 
 from __future__ import annotations
 
@@ -423,6 +424,13 @@ def report(times, space, checks, limit):
     bare = rates["a bare loop that reads the neighbours"]
     for name, rate in rates.items():
         lines.append(f"| {name} | {rate / 1e6:.0f} | {rate / bare:.0%} |")
+    lines += [
+        "",
+        "The rest of the sweep is union-find and the branches it takes (a random walk through small arrays, little of it",
+        "foreseeable). Found by this comparison: the sweep asked every neighbour its family, and now asks only those that",
+        "hold. In one run, results equal: 253 to 261 million visits a second up to 50 holders, 138 to 164 up to 300, 93 to",
+        "123 up to 1,000.",
+    ]
     return "\n".join([*lines, ""])
 
 
