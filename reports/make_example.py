@@ -16,6 +16,8 @@ import sys
 import tempfile
 from pathlib import Path
 
+from twicetold.report import page_name
+
 HERE = Path(__file__).resolve().parent
 REPO = HERE.parent
 CATALOGUE = REPO / "data_examples" / "archipelago"
@@ -68,7 +70,7 @@ def chosen(run: Path) -> list[str]:
         for row in csv.DictReader(source):
             seen[row["verdict"]] = seen.get(row["verdict"], 0) + 1
             if seen[row["verdict"]] <= 2 and len(names) < PAGES:
-                names.append(f"{row['motif_id']}.html")
+                names.append(page_name(row["motif_id"]))
     return names
 
 
