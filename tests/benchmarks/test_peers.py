@@ -170,7 +170,7 @@ cat(sprintf('{"joins": %.15g, "joins_mean": %.15g, "joins_var": %.15g, "moran": 
   j$estimate[[1]], j$estimate[[2]], j$estimate[[3]], m$estimate[[1]], m$estimate[[2]], m$estimate[[3]],
   sum(t1[1:2]), sum(t2[1:2]), mean(jm$res[-length(jm$res)]), jm$p.value, mm$p.value,
   as.character(packageVersion("spdep")), as.character(getRversion())))
-"""  # noqa: E501
+"""
 
 
 def spdep(graph, held, draws):
