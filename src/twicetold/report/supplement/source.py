@@ -109,16 +109,28 @@ def _read_run(folder: Path) -> Run:
     rules = CatalogueRules(restricted=plan.catalogue.restricted)
     catalogue = read_catalogue(folder / "catalogue", rules)
     record = dict(json.loads((folder / "run.json").read_text(encoding="utf-8")))
-    tables = {p.stem: read_rows(p) for p in sorted((folder / "tables").glob("*.csv"))}
-    motifs = read_rows(folder / "motifs.csv")
+    tables = {p.stem: _even(p) for p in sorted((folder / "tables").glob("*.csv"))}
+    motifs = _even(folder / "motifs.csv")
     if sorted(row[motifs[0].index("motif_id")] for row in motifs[1]) != list(catalogue.motif_ids):
         raise TwicetoldError(
             f"motifs.csv and the catalogue in {folder.name} do not list the same motifs. "
             "Rank the catalogue again."
         )
-    header, rows = read_rows(folder / "contacts.csv")
+    header, rows = _even(folder / "contacts.csv")
     graph = contacts_graph(catalogue, header, rows, rule=plan.graph.rule)
     return Run(folder, catalogue, plan, graph, record, motifs, tables)
+
+
+def _even(path: Path) -> Rows:
+    """Read a table that must have a heading and as many cells in every row."""
+    header, rows = read_rows(path)
+    uneven = len(set(header)) < len(header) or any(len(row) != len(header) for row in rows)
+    if not header or uneven:
+        raise TwicetoldError(
+            f"{path.name} in this run is damaged (no heading, or rows of other lengths). Rank the "
+            "catalogue again."
+        )
+    return header, rows
 
 
 def contacts_graph(
