@@ -23,6 +23,9 @@ from twicetold.plan import Plan
 
 PLAN = Plan().replace(sensitivity__draws=999)
 
+# What SciPy calls a generator, from 1.15 on and before.
+NAMED = "rng" if "rng" in inspect.signature(stats.bootstrap).parameters else "random_state"
+
 
 def table_of(category, holders, joins, expected, q):
     m = len(category)
@@ -71,11 +74,9 @@ def test_the_bootstrap_agrees_with_scipys():
     expected = rng.uniform(0.5, 4, 40)
     joins = rng.poisson(1.6 * expected).astype(float)
     ratio, low, high = _ratio(joins, expected, 3)
-    # Its name until SciPy 1.15.
-    named = "rng" if "rng" in inspect.signature(stats.bootstrap).parameters else "random_state"
     other = stats.bootstrap(
         (joins, expected), lambda j, e, axis=-1: j.sum(axis) / e.sum(axis), paired=True,
-        method="percentile", n_resamples=9999, **{named: rng},
+        method="percentile", n_resamples=9999, **{NAMED: rng},
     ).confidence_interval  # fmt: skip
     # Quantiles at 2.5 % of 1,999 draws: four standard errors over the density there.
     sd = (other.high - other.low) / 3.92
@@ -126,7 +127,7 @@ def test_one_stratum_agrees_with_scipys_permutation_test():
     )  # fmt: skip
     other = stats.permutation_test(
         (a, b), lambda x, y, axis: x.mean(axis) - y.mean(axis), vectorized=True,
-        n_resamples=9999, **{named: rng},
+        n_resamples=9999, **{NAMED: rng},
     ).pvalue  # fmt: skip
     assert abs(p - other) < 4 * np.sqrt(2 * other * (1 - other) / 9999) + 3e-4
 
