@@ -9,7 +9,6 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 import pandas as pd
-from statsmodels.stats.proportion import proportion_confint
 
 from twicetold.plan import Plan
 from twicetold.randomness import Stream, chunk_generator
@@ -70,6 +69,9 @@ def categories(table: pd.DataFrame, plan: Plan) -> Categories:
 
 def _row(table: pd.DataFrame, tested: pd.DataFrame, name: str, plan: Plan) -> dict[str, object]:
     """One category: all joins over all expected joins, and how many reject."""
+    # Loading it takes a second, and one motif alone needs none of it.
+    from statsmodels.stats.proportion import proportion_confint
+
     mine = tested[tested["category"] == name]
     joins = mine["joins"].to_numpy(float)
     expected = mine["joins_expected"].to_numpy(float)

@@ -6,7 +6,6 @@ from typing import Literal
 
 import numpy as np
 import numpy.typing as npt
-from statsmodels.stats.multitest import multipletests
 
 from twicetold.errors import TwicetoldError
 
@@ -63,6 +62,9 @@ def adjust(p: npt.ArrayLike, method: Literal["bh", "by"] = "bh") -> Floats:
     TwicetoldError
         When the method is unknown or a p-value lies outside 0 .. 1.
     """
+    # Loading it takes a second, and one motif alone needs none of it.
+    from statsmodels.stats.multitest import multipletests
+
     names = {"bh": "fdr_bh", "by": "fdr_by"}
     if method not in names:
         raise TwicetoldError(f'`method` must be "bh" or "by", got {method!r}.')
