@@ -42,7 +42,7 @@ EMERGING = {
     "a tenth emergence": (0.1, 0.9, 0.0),
 }
 #: Walks the motifs are taken from; walks of the references; motifs judged; catalogues fitted.
-WALKS, REFERENCE, MOTIFS, FITS = 2000, 4000, 400, 3
+WALKS, REFERENCE, MOTIFS, FITS = 4000, 8000, 400, 3
 #: Level, and what the share of rejections may be.
 ALPHA, MOST = 0.05, 0.06
 LINES: list[str] = []
@@ -274,7 +274,7 @@ def judge_at(x):
     """The judge of power, on this place: plain p at .05, equal propensities."""
     ones = np.ones(made.N)
     levels = FAMILY["compact"]
-    group = SimpleNamespace(graph=GRAPH, family_codes=levels, level_codes=(), n=made.N)
+    group = SimpleNamespace(graph=GRAPH, family_codes=levels, level_codes=levels, n=made.N)
     emergence = emergence_world(GRAPH, levels, ones, COUNTS, draws=9999, seed=5, pool=POOL)
     study = SimpleNamespace(plan=Plan(), families=True)
     ground = SimpleNamespace(group=group, propensity=ones)
