@@ -350,7 +350,10 @@ def main() -> None:
         sys.exit(2)
     except KeyboardInterrupt:
         print("twicetold: interrupted; nothing half-written was left.", file=sys.stderr)
-        sys.exit(130)
+        sys.stderr.flush()
+        # Everything is cleaned up by now. A plain exit would end by the signal instead of with 130
+        # where the interrupt struck code made from text (dataclasses, kernels), as Python does.
+        os._exit(130)
     except BrokenPipeError:
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
         sys.exit(0)
