@@ -11,7 +11,6 @@ to effort (half of the motifs) or grown along the map (the other half). Presence
 throughout. The run is ``rank_catalogue`` against the emergence-only world, without what only pages
 show.
 """
-# ruff: noqa: E501 (the report's prose)
 
 from __future__ import annotations
 

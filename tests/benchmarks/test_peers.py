@@ -9,7 +9,6 @@ offers: esda and spdep for Moran's I and for joins, one call each; the loop by h
 Moran's I; twicetold always counts all seven statistics. The whole catalogue of 2,200 motifs is in
 ``emergence.md``, beside the same loop with draws shared among motifs of a count.
 """
-# ruff: noqa: E501 (the report's prose)
 
 from __future__ import annotations
 
