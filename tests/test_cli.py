@@ -17,8 +17,9 @@ import pytest
 
 from small_world import put, small_world
 from twicetold import cli
+from twicetold.errors import TwicetoldError
 from twicetold.plan import Plan, read_plan
-from twicetold.run import rank_run
+from twicetold.run import rank_run, resolved_plan
 from twicetold.workers import ThreadPool
 
 QUICK = ("--worlds", "emergence,ancestry", "--draws", "499")
@@ -333,6 +334,78 @@ class TestWrongWords:
         assert_refused(run("rank", catalogue, "--out", tmp_path / "out", *words), *said)
         assert everything(tmp_path) == before
 
+    @pytest.mark.parametrize(
+        ("words", "said"),
+        [
+            (("--graph", "nearest:0"), ["graph.rule", "nearest:0", "1 to 40"]),
+            (("--graph", "nearest:41"), ["nearest:41", "1 to 40"]),
+            (("--graph", "nearest:٣"), ["nearest:٣", "1 to 40"]),
+            (("--graph", "within:0"), ["within:0", "above 0"]),
+            (("--graph", "within:-5"), ["graph.rule", "within:-5"]),
+            (("--graph", "within:" + "9" * 400), ["within:KM"]),
+            (("--graph", "given"), ["contacts"]),
+            (("--graph", "given:nowhere.gal"), ["nowhere.gal", "cannot be read"]),
+            (("--graph", "given: "), ["given:FILE"]),
+            (("--propensity", "luck"), ["emergence.propensity"]),
+            (("--propensity", "covariates"), ["emergence.covariates"]),
+            (("--draws", "0"), ["evidence.draws", "99"]),
+            (("--draws", "-5"), ["evidence.draws", "99"]),
+            (("--walks", "-1"), ["evidence.walks", "100"]),
+            (("--seed", "-1"), ["evidence.seed"]),
+            (("--worlds", ","), ["evidence.worlds", "at least one"]),
+        ],
+    )
+    def test_plan_refuses_what_a_run_would(self, words, said, run, catalogue, tmp_path):
+        before = everything(tmp_path)
+        refused = run("plan", catalogue, "--out", tmp_path / "plan.toml", *words)
+        assert_refused(refused, *said)
+        again = run("rank", catalogue, "--out", tmp_path / "out", *words)
+        assert refused.err == again.err
+        if words[0] != "--worlds":
+            assert_refused(run("power", catalogue, *words), *said)
+        assert everything(tmp_path) == before
+
+    def test_a_column_that_cannot_carry_the_fit_is_said_before_the_plan_is_written(
+        self, world, tmp_path
+    ):
+        world["traditions"][0].append("rain")
+        for row in world["traditions"][1:]:
+            row.append("3")
+        folder = put(world, tmp_path / "catalogue")
+        wanted = Plan().replace(emergence__propensity="covariates", emergence__covariates=("rain",))
+        with pytest.raises(TwicetoldError, match="'rain' must vary"):
+            resolved_plan(folder, wanted)
+        # A run says the same.
+        with pytest.raises(TwicetoldError, match="'rain' must vary"):
+            rank_run(folder, tmp_path / "out", wanted, pool=ThreadPool(1))
+
+    def test_a_rounding_onto_one_point_is_said_before_the_work(
+        self, run, world, tmp_path, monkeypatch
+    ):
+        for k, row in enumerate(world["traditions"][1:]):
+            row[2:4] = [f"{1 + 0.01 * (k % 4):g}", f"{1 + 0.01 * (k // 4):g}"]
+        folder = put(world, tmp_path / "catalogue")
+        before = everything(tmp_path)
+        assert_refused(run("plan", folder, "--out", tmp_path / "p.toml"), "report.round_degrees")
+        with monkeypatch.context() as patch:
+            patch.setattr("twicetold.evidence.rank_catalogue", None)  # never reached
+            said = run("rank", folder, "--out", tmp_path / "out", *QUICK)
+        assert_refused(said, "report.round_degrees", "[report]")
+        assert everything(tmp_path) == before
+        finer = tmp_path / "finer.toml"
+        finer.write_text("[report]\nround_degrees = 0.01\n")
+        done = run("rank", folder, "--out", tmp_path / "out", "--plan", finer, *QUICK)
+        assert done.code == 0, done.err
+
+    def test_efforts_whose_powers_no_number_holds(self, run, world, tmp_path):
+        for k, row in enumerate(world["traditions"][1:]):
+            row[5] = f"1e{(-1) ** k * 90}"
+        folder = put(world, tmp_path / "catalogue")
+        steep = tmp_path / "plan.toml"
+        steep.write_text("[emergence]\nexponent = 10\n")
+        said = run("test", folder, "m1", "--plan", steep, *QUICK)
+        assert_refused(said, "emergence.exponent", "smaller")
+
     def test_withdrawing_nearly_everybody(self, run, catalogue, tmp_path):
         gone = [word for k in range(19) for word in ("--without", f"t{k}")]
         assert_refused(
@@ -348,6 +421,25 @@ class TestWrongWords:
             ("[catalogue]\nfamily = 'stock'", ["traditions.csv", "stock"]),
             ("[catalogue]\nwithout = ['t99']", ["t99"]),
             ("[ancestry]\nlevel = 'branch'", ["ancestry.level", "branch"]),
+            ("[ancestry]\nlevel = 'clan'", ["ancestry.level", "family, branch"]),
+            ("[graph]\nrule = 'nearest:0'", ["graph.rule", "nearest:0"]),
+            ("[graph]\nrule = 'within:-5'", ["graph.rule", "within:-5"]),
+            ("[sensitivity]\ngraphs = ['nearest:0']", ["sensitivity.graphs", "nearest:0"]),
+            ("[sensitivity]\ngraphs = ['within:0']", ["sensitivity.graphs", "within:0"]),
+            ("[sensitivity]\nreaches = [0.5]", ["sensitivity.reaches", "0.5"]),
+            ("[sensitivity]\nexponents = [-1]", ["sensitivity.exponents", "-1"]),
+            ("[sensitivity]\ndraws = -1", ["sensitivity.draws", "-1"]),
+            ("[sensitivity]\nregions = 1", ["sensitivity.regions", "1"]),
+            ("[sensitivity]\nhidden_km = 1e-300", ["sensitivity.hidden_km", "1e-300"]),
+            ("[evidence]\nalpha = 0", ["evidence.alpha", "got 0"]),
+            ("[evidence]\nalpha = 1", ["evidence.alpha", "got 1"]),
+            ("[evidence]\nwalks = -3", ["evidence.walks", "-3"]),
+            ("[spread]\nreach = 0.5", ["spread.reach", "0.5"]),
+            ("[spread]\nturnover = 1.2", ["spread.turnover", "1.2"]),
+            ("[spread]\nturnover = 0", ["spread.turnover", "got 0"]),
+            ("[spread]\nmin_holders = 0", ["spread.min_holders", "got 0"]),
+            ("[report]\nround_degrees = 1e-300", ["report.round_degrees", "1e-300"]),
+            ("[report]\nround_degrees = -1", ["report.round_degrees", "-1"]),
             ("[emergence]\npropensity='covariates'\ncovariates=['rain']", ["rain"]),
             ("no plan", ["plan.toml", "not valid TOML"]),
             ('{"no": "plan"}', ["plan.toml", '"plan"']),

@@ -86,6 +86,14 @@ def between(name: str, value: float, low: float, high: float) -> None:
         raise PlanError(f"`{name}` must lie from {low:,} to {high:,}, got {_digits(value)}.")
 
 
+def zero_or_between(name: str, value: float, low: float, high: float) -> None:
+    """Refuse a number outside a range; 0 turns the matter off."""
+    if value != 0.0 and not low <= value <= high:
+        raise PlanError(
+            f"`{name}` must be 0 or lie from {low:,} to {high:,}, got {_digits(value)}."
+        )
+
+
 def _digits(value: float) -> str:
     """Give a number with its thousands set apart, or as a power where it is very long."""
     if abs(value) < 1e18:

@@ -23,6 +23,7 @@ from twicetold._plan_values import (
     shown,
     toml_value,
     unknown_name,
+    zero_or_between,
 )
 from twicetold.errors import PlanError
 
@@ -218,7 +219,7 @@ class SensitivitySection:
             between("sensitivity.reaches", reach, 1.0, 100.0)
         between("sensitivity.regions", self.regions, 2, 50)
         between("sensitivity.draws", self.draws, 99, 100_000_000)
-        between("sensitivity.hidden_km", self.hidden_km, 0.0, 20_000.0)
+        zero_or_between("sensitivity.hidden_km", self.hidden_km, 1.0, 20_000.0)
 
 
 @dataclass(frozen=True)
@@ -231,7 +232,7 @@ class ReportSection:
 
     def check(self) -> None:
         """Refuse values that cannot be used."""
-        between("report.round_degrees", self.round_degrees, 0.0, 10.0)
+        zero_or_between("report.round_degrees", self.round_degrees, 0.0001, 10.0)
 
 
 @dataclass(frozen=True)

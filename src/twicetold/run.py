@@ -88,11 +88,30 @@ def check_tables(path: Path, plan: Plan) -> tuple[bool, list[str]]:
 
 
 def resolved_plan(path: Path, plan: Plan) -> Plan:
-    """Give the plan with everything the catalogue decides written out."""
-    from twicetold.catalogue import read_catalogue
-    from twicetold.evidence.study import resolve
+    """Give the plan with everything the catalogue decides written out.
 
-    return resolve(read_catalogue(path, rules_of(plan)), plan)[0]
+    Raises
+    ------
+    TwicetoldError
+        When a run of this plan would be refused: a plan is registered before it is run.
+    """
+    from twicetold.catalogue import read_catalogue
+    from twicetold.evidence.propensities import group_propensity
+    from twicetold.evidence.study import prepare
+
+    catalogue = read_catalogue(path, rules_of(plan))
+    _check_rounding(catalogue, plan)
+    study = prepare(catalogue, plan)
+    for group in study.groups:
+        group_propensity(study, group)
+    return study.plan
+
+
+def _check_rounding(catalogue: Catalogue, plan: Plan) -> None:
+    """Refuse a rounding that the pictures could not be drawn on before hours are spent."""
+    from twicetold.evidence.rounded import round_coordinates
+
+    round_coordinates(catalogue, plan.report.round_degrees)
 
 
 def _claim(out: Path | None, *, force: bool) -> AbstractContextManager[Claim | None]:
@@ -182,6 +201,7 @@ def rank_run(
     with claimed(out, force=force) as claim:
         clock = [time.perf_counter()]
         catalogue = read_catalogue(path, rules_of(plan))
+        _check_rounding(catalogue, plan)
         if tell is not None:
             _forewarn(catalogue, plan, pool, tell)
         clock.append(time.perf_counter())

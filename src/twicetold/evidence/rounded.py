@@ -51,7 +51,7 @@ def round_coordinates(catalogue: Catalogue, degrees: float) -> Catalogue:
     if np.ptp(latitude) == 0.0 and np.ptp(longitude) == 0.0:
         raise PlanError(
             f"`report.round_degrees` must leave the traditions apart, but {degrees:g} degrees put "
-            "all of them on one point. Use a smaller step."
+            "all of them on one point. Set a smaller one in the plan: round_degrees under [report]."
         )
     for array in (latitude, longitude):
         array.flags.writeable = False

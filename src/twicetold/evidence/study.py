@@ -11,7 +11,7 @@ import numpy.typing as npt
 from twicetold.catalogue import Catalogue
 from twicetold.errors import PlanError
 from twicetold.evidence.contacts import KnownContacts
-from twicetold.graph import ContactGraph, contact_graph
+from twicetold.graph import ContactGraph, contact_graph, parse_rule
 from twicetold.plan import Plan
 
 IntArray = npt.NDArray[np.int32]
@@ -87,7 +87,12 @@ def resolve(catalogue: Catalogue, plan: Plan) -> tuple[Plan, tuple[str, ...]]:
     ------
     PlanError
         When the plan asks for something the catalogue does not have.
+    GraphError
+        When a rule of a contact graph cannot be used.
     """
+    parse_rule(plan.graph.rule)
+    for rule in plan.sensitivity.graphs:
+        parse_rule(rule, key="sensitivity.graphs")
     notes = []
     changes: dict[str, object] = {}
     if plan.emergence.propensity == "effort" and catalogue.effort is None:

@@ -43,8 +43,14 @@ class Rule:
         return self.kind
 
 
-def parse_rule(rule: str) -> Rule:
+def parse_rule(rule: str, *, key: str = "graph.rule") -> Rule:
     """Read a rule such as ``nearest:6`` or ``within:500``.
+
+    Parameters
+    ----------
+    rule : str
+    key : str
+        Key of the plan that holds it, for the message.
 
     Raises
     ------
@@ -57,7 +63,7 @@ def parse_rule(rule: str) -> Rule:
         digits = value.isascii() and value.isdigit() and len(value) <= 9
         if not (digits and 1 <= int(value) <= 40):
             raise GraphError(
-                "`graph.rule` must be nearest:K with K a whole number from 1 to 40 "
+                f"`{key}` must be nearest:K with K a whole number from 1 to 40 "
                 f"(for instance nearest:6), got {shown(rule)}."
             )
         return Rule("nearest", k=int(value))
@@ -68,7 +74,7 @@ def parse_rule(rule: str) -> Rule:
             km = math.nan
         if not (math.isfinite(km) and km > 0):
             raise GraphError(
-                "`graph.rule` must be within:KM with KM a number of kilometres above 0 "
+                f"`{key}` must be within:KM with KM a number of kilometres above 0 "
                 f"(for instance within:500), got {shown(rule)}."
             )
         return Rule("within", km=km)
@@ -76,4 +82,4 @@ def parse_rule(rule: str) -> Rule:
         return Rule("given", file=value)
     if kind in ("delaunay", "gabriel") and not colon:
         return Rule(kind)
-    raise GraphError(f"`graph.rule` must be one of {_ALL}; got {shown(rule)}.")
+    raise GraphError(f"`{key}` must be one of {_ALL}; got {shown(rule)}.")

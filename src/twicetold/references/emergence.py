@@ -37,6 +37,9 @@ from twicetold.statistics.moran import moran_from_score
 from twicetold.statistics.observe import STATISTICS
 from twicetold.workers import Pool, ThreadPool
 
+#: Natural log of a propensity over the geometric mean, either way: sums and ratios stay finite.
+_LARGEST_LOG = 300.0
+
 
 @dataclass(frozen=True)
 class EmergenceWorld:
@@ -175,7 +178,8 @@ def effort_propensity(effort: npt.ArrayLike, exponent: float = 1.0) -> Floats:
     Raises
     ------
     TwicetoldError
-        When an effort is not a finite number above 0, or the exponent is not finite.
+        When an effort is not a finite number above 0, the exponent is not finite, or the powers
+        leave the range of numbers.
     """
     given = np.asarray(effort, dtype=np.float64)
     if given.ndim != 1 or not np.all(np.isfinite(given) & (given > 0)):
@@ -187,7 +191,14 @@ def effort_propensity(effort: npt.ArrayLike, exponent: float = 1.0) -> Floats:
         raise TwicetoldError(f"`exponent` must be a finite number, got {exponent}.")
     # Relative to the geometric mean, so that a high power does not overflow.
     logs = np.log(given)
-    out: Floats = np.exp(exponent * (logs - logs.mean()))
+    powers = exponent * (logs - logs.mean())
+    if len(powers) and np.abs(powers).max() > _LARGEST_LOG:
+        raise TwicetoldError(
+            f"`effort` to the power {exponent:g} must stay within {_LARGEST_LOG:g} natural logs of "
+            f"its mean, got {np.abs(powers).max():.4g}. Use a smaller `emergence.exponent`, or "
+            "mend the effort column."
+        )
+    out: Floats = np.exp(powers)
     return np.ones(len(given)) if exponent == 0 else out
 
 
