@@ -627,6 +627,13 @@ class TestStart:
             assert re.search(rf"^\s+{command}\b", said.out, re.MULTILINE)
         assert run("--version").out.startswith("twicetold ")
 
+    def test_help_says_what_force_replaces(self, run):
+        helps = {c: " ".join(run(c, "--help").out.split()) for c in ("plan", "rank", "supplement")}
+        assert "Replace an earlier plan file." in helps["plan"]
+        assert "folder" not in helps["plan"].split("--force")[1]
+        for command in ("rank", "supplement"):
+            assert "Replace an earlier run's folder." in helps[command]
+
     def test_no_words(self, run):
         assert "Usage" in (said := run()).out + said.err
 

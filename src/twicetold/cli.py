@@ -119,7 +119,7 @@ def plan(
     walks: WalksOpt = None,
     seed: SeedOpt = None,
     worlds: WorldsOpt = None,
-    force: ForceOpt = False,
+    force: Annotated[bool, typer.Option("--force", help="Replace an earlier plan file.")] = False,
 ) -> None:
     """Write the analysis plan as TOML, every choice spelled out (register it before you look)."""
     from twicetold.run import resolved_plan, write_text
