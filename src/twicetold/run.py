@@ -2,18 +2,23 @@
 
 from __future__ import annotations
 
-import hashlib
 import itertools
-import json
-import math
-import platform
 import time
-from collections.abc import Callable, Mapping
+from collections.abc import Callable
 from contextlib import AbstractContextManager, nullcontext
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
-from twicetold import __version__
+from twicetold._records import (
+    contacts_frame,
+    csv_text,
+    evidence_record,
+    json_text,
+    run_record,
+    run_tables,
+    versions,
+    write_csv,
+)
 from twicetold.folders import Claim, claimed, new_folder, write_text
 from twicetold.plan import COLUMNS, Plan
 
@@ -21,18 +26,27 @@ if TYPE_CHECKING:
     import pandas as pd
 
     from twicetold.catalogue import Catalogue, CatalogueRules
-    from twicetold.evidence import MotifEvidence, Ranking
+    from twicetold.evidence import Ranking
     from twicetold.report.supplement import Run
     from twicetold.workers import Pool
 
 __all__ = [
     "check_tables",
+    "contacts_frame",
+    "csv_text",
+    "evidence_record",
     "motif_run",
     "power_run",
     "rank_run",
     "resolved_plan",
+    "rounded_again",
+    "rules_of",
+    "run_record",
+    "run_tables",
     "supplement_run",
     "verify_run",
+    "versions",
+    "write_csv",
     "write_demonstration",
     "write_text",
 ]
@@ -145,39 +159,10 @@ def motif_run(
 
             command = f"twicetold test {path.name} {_quoted(evidence.motif_id)} --plan plan.toml"
             with claim.filled() as part:
-                write_text(part / "test.json", _json(record))
+                write_text(part / "test.json", json_text(record))
                 write_text(part / "plan.toml", ranking.plan.to_toml())
                 write_pages(ranking, part, command={"test": command})
-        return _json(record).rstrip("\n") if as_json else tell(ranking, evidence)
-
-
-def evidence_record(ranking: Ranking, evidence: MotifEvidence) -> dict[str, Any]:
-    """Give one motif's numbers as plain JSON values."""
-    return {
-        "twicetold": __version__,
-        "catalogue": ranking.catalogue.title,
-        "notice": ranking.catalogue.notice,
-        **{k: _plain(v) for k, v in evidence.row.items() if k != "rank"},
-        "worlds": [
-            {
-                "world": c.world,
-                "statistic": c.statistic,
-                "direction": c.direction,
-                "observed": _plain(c.observed),
-                "expected": _plain(c.expected),
-                "p": _plain(c.p),
-                "p_attainable": _plain(c.p_attainable),
-                "primary": c.primary,
-                "exact": bool(c.law is not None and c.law.exact),
-                "note": c.note,
-            }
-            for c in evidence.comparisons
-        ],
-        "hidden_bound_detail": {k: _plain(v) for k, v in evidence.hidden_bound.items()},
-        "fits": {k: _plain(v) for k, v in ranking.fits.items()},
-        "notes": list(ranking.notes),
-        "plan": ranking.plan.to_mapping(),
-    }
+        return json_text(record).rstrip("\n") if as_json else tell(ranking, evidence)
 
 
 def rank_run(
@@ -218,7 +203,7 @@ def rank_run(
             clock.append(time.perf_counter())
             seconds = [round(b - a, 3) for a, b in itertools.pairwise(clock)]
             timings = dict(zip(("read", "compute", "write"), seconds, strict=True))
-            write_text(part / "timings.json", _json({"seconds": timings}))
+            write_text(part / "timings.json", json_text({"seconds": timings}))
         return _said(ranking, out, seconds, moved)
 
 
@@ -240,7 +225,7 @@ def _write_run(ranking: Ranking, folder: Path, *, path: Path, by: str, moved: An
 
     write_csv(ranking.motifs, folder / "motifs.csv")
     write_text(folder / "plan.toml", ranking.plan.to_toml())
-    write_text(folder / "run.json", _json(run_record(ranking, by=by)))
+    write_text(folder / "run.json", json_text(run_record(ranking, by=by)))
     write_catalogue(ranking.catalogue, folder / "catalogue")
     tables = run_tables(ranking)
     if moved is not None:
@@ -255,81 +240,6 @@ def _write_run(ranking: Ranking, folder: Path, *, path: Path, by: str, moved: An
     if by != "evidence":
         command += f" --by {by}"
     write_pages(ranking, folder, command={"rank": command, "catalogue": path.name})
-
-
-def run_tables(ranking: Ranking) -> dict[str, pd.DataFrame]:
-    """Give every table of a run but that of the motifs, by name."""
-    tables = dict(ranking.tables)
-    for name in ("bands", "prevalence", "categories"):
-        frame = getattr(ranking, name)
-        if frame is not None:
-            tables[name] = frame
-    stability = [
-        e.stability.assign(motif_id=e.motif_id) for e in ranking.evidence if e.stability is not None
-    ]
-    if stability:
-        import pandas as pd
-
-        together = pd.concat(stability, ignore_index=True)
-        first = ["motif_id", *[c for c in together.columns if c != "motif_id"]]
-        tables["stability"] = together[first]
-    return tables
-
-
-def contacts_frame(ranking: Ranking) -> pd.DataFrame:
-    """Give the contact graph as a table: one row an edge."""
-    import pandas as pd
-
-    graph, ids = ranking.graph, ranking.catalogue.tradition_ids
-    return pd.DataFrame(
-        {
-            "tradition_id": [ids[i] for i in graph.edges[:, 0]],
-            "neighbour_id": [ids[i] for i in graph.edges[:, 1]],
-            "length_km": graph.length_km.round(3),
-            "bridge": ["yes" if b else "no" for b in graph.bridge],
-        }
-    )
-
-
-def run_record(ranking: Ranking, *, by: str) -> dict[str, Any]:
-    """Everything needed to make the run again: plan, seed, versions, inputs by SHA-256."""
-    catalogue = ranking.catalogue
-    return {
-        "twicetold": __version__,
-        "plan": ranking.plan.to_mapping(),
-        "plan_sha256": ranking.plan.digest(),
-        "by": by,
-        "seed": ranking.plan.evidence.seed,
-        "catalogue": {
-            "title": catalogue.title,
-            "notice": catalogue.notice,
-            "traditions": catalogue.n_traditions,
-            "motifs": catalogue.n_motifs,
-            "attestations": int(catalogue.attested.nnz),
-            "without_coordinates": len(catalogue.unlocated),
-            "withheld_traditions": catalogue.withheld_traditions,
-            "withheld_motifs": catalogue.withheld_motifs,
-            "inputs": [
-                {"name": s.name, "bytes": s.size, "sha256": s.sha256} for s in catalogue.sources
-            ],
-        },
-        "graph": _plain_mapping(ranking.fits.get("graph", {})),
-        "fits": {k: _plain(v) for k, v in ranking.fits.items() if k != "graph"},
-        "verdicts": {
-            str(k): int(v) for k, v in ranking.motifs["verdict"].value_counts().sort_index().items()
-        },
-        "notes": list(ranking.notes),
-        "versions": versions(),
-        "motifs_sha256": hashlib.sha256(csv_text(ranking.motifs).encode()).hexdigest(),
-    }
-
-
-def versions() -> dict[str, str]:
-    """Versions of Python and of the packages that make numbers."""
-    from importlib.metadata import version
-
-    names = ("numpy", "scipy", "pandas", "statsmodels", "libpysal", "esda", "numba", "scikit-learn")
-    return {"python": platform.python_version(), **{name: version(name) for name in names}}
 
 
 def _said(ranking: Ranking, out: Path, seconds: list[float], moved: Any) -> str:
@@ -412,38 +322,6 @@ def verify_run(deposit: Path, *, pool: Pool) -> tuple[bool, list[str]]:
     from twicetold.verify import verify_deposit
 
     return verify_deposit(deposit, pool=pool)
-
-
-def csv_text(frame: Any) -> str:
-    """Write a table as CSV text: full precision, blanks for what is not there, line feeds."""
-    text: str = frame.to_csv(index=False, lineterminator="\n", na_rep="", float_format="%.12g")
-    return text
-
-
-def write_csv(frame: Any, path: Path) -> None:
-    """Write a table as UTF-8 CSV."""
-    write_text(path, csv_text(frame))
-
-
-def _json(record: Mapping[str, Any]) -> str:
-    return json.dumps(record, ensure_ascii=False, indent=2, allow_nan=False) + "\n"
-
-
-def _plain_mapping(value: Any) -> dict[str, Any]:
-    return {str(k): _plain(v) for k, v in dict(value).items()}
-
-
-def _plain(value: Any) -> Any:
-    """Turn NumPy values and NaN into what JSON can hold."""
-    if isinstance(value, Mapping):
-        return _plain_mapping(value)
-    if isinstance(value, list | tuple):
-        return [_plain(v) for v in value]
-    if hasattr(value, "tolist"):
-        return _plain(value.tolist())
-    if isinstance(value, float):
-        return float(f"{value:.12g}") if math.isfinite(value) else None
-    return value
 
 
 def _quoted(words: str) -> str:
