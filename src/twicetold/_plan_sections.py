@@ -121,8 +121,10 @@ class AncestrySection:
 class SpreadSection:
     """The contact-only and transmission-only worlds."""
 
-    turnover: str | float = _say(
-        'Gains per loss: "fit" from the prevalence curve, or a number above 0 and below 1.', "fit"
+    turnover: str | float | tuple[float, ...] = _say(
+        'Gains per loss: "fit" from the prevalence curve, a number above 0 and below 1, or a range '
+        "[low, high] within which p-values are the largest.",
+        "fit",
     )
     recording: str = _say(
         'Chance that a true holder is recorded: "fit" from effort, or "complete".', "fit"
@@ -133,7 +135,9 @@ class SpreadSection:
     def check(self) -> None:
         """Refuse values that cannot be used."""
         if isinstance(self.turnover, str):
-            one_of("spread.turnover", self.turnover, ("fit",), " or a number")
+            one_of("spread.turnover", self.turnover, ("fit",), ", a number or a range")
+        elif isinstance(self.turnover, tuple):
+            _check_range(self.turnover)
         elif not 0.0 < self.turnover < 1.0:
             raise PlanError(
                 f"`spread.turnover` must lie above 0 and below 1, got {self.turnover:g}."
@@ -141,6 +145,14 @@ class SpreadSection:
         one_of("spread.recording", self.recording, ("fit", "complete"))
         between("spread.reach", self.reach, 1.0, 100.0)
         between("spread.min_holders", self.min_holders, 1, 1000)
+
+
+def _check_range(turnover: tuple[float, ...]) -> None:
+    if len(turnover) != 2 or not 0.0 < turnover[0] < turnover[1] < 1.0:
+        raise PlanError(
+            "`spread.turnover` as a range must be two numbers above 0 and below 1, the lower one "
+            f"first, got {shown(list(turnover))}."
+        )
 
 
 @dataclass(frozen=True)

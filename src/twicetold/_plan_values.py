@@ -25,6 +25,9 @@ def coerced(name: str, value: Any, default: Any) -> Any:
     """Check the type of a value against its default's, widening whole numbers to decimals."""
     if name == "spread.turnover" and _is_number(value):
         return float(value)
+    if name == "spread.turnover" and isinstance(value, list | tuple):
+        ok = all(_is_number(v) for v in value)
+        return tuple(float(v) for v in _typed(name, value, ok, "a list of numbers"))
     if name == "catalogue.presence" and isinstance(value, Mapping):
         return {str(k): _strings(f"{name}.{shown(k)}", v) for k, v in value.items()}
     if isinstance(default, bool):

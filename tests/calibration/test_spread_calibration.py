@@ -6,18 +6,19 @@ Run by hand: ``nice pytest -m calibration tests/calibration/test_spread_calibrat
 from __future__ import annotations
 
 import time
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 from types import SimpleNamespace
 
 import confounder_worlds as made
 import numpy as np
 import pytest
+from scipy.optimize import brentq
 from statsmodels.stats.proportion import proportion_confint
 
 from twicetold.evidence.confidence import ConfidenceSet, Point, Prevalence, confidence_set
 from twicetold.evidence.power import Judge, _members
-from twicetold.evidence.scatter import INHERITANCE, Transmission, scatter_worlds
+from twicetold.evidence.scatter import BESIDE, INHERITANCE, Transmission, scatter_worlds
 from twicetold.evidence.verdict import VERDICTS
 from twicetold.graph import build_graph
 from twicetold.plan import Plan
@@ -25,6 +26,7 @@ from twicetold.randomness import Stream
 from twicetold.references.emergence import emergence_world
 from twicetold.spread import SpreadModel, cap_for, chain_tables, walk_chunk
 from twicetold.spread.chain import STATISTICS
+from twicetold.spread.recording import recorded_probability
 from twicetold.spread.turnover import log_series
 from twicetold.spread.world import effective_size, spread_words
 from twicetold.workers import ThreadPool
@@ -41,8 +43,13 @@ EMERGING = {
     "a third emergence": (1 / 3, 2 / 3, 0.0),
     "a tenth emergence": (0.1, 0.9, 0.0),
 }
-#: Walks the motifs are taken from; walks of the references; motifs judged; catalogues fitted.
-WALKS, REFERENCE, MOTIFS, FITS = 4000, 8000, 400, 3
+#: Walks the motifs are taken from; walks of a reference (the tool's default); motifs judged;
+#: catalogues fitted; motifs of such a catalogue.
+WALKS, REFERENCE, MOTIFS, FITS, CATALOGUE = 4000, 10_000, 1000, 3, 800
+#: Seeds of the references: the level is that of a tool whose own random numbers vary too.
+SEEDS = (5, 6, 7, 8)
+#: Effort of the traditions (sd of its logarithm), and what is recorded on average of a holder.
+EFFORT_SD, RECORDED = 0.8, 0.7
 #: Level, and what the share of rejections may be.
 ALPHA, MOST = 0.05, 0.06
 LINES: list[str] = []
@@ -88,8 +95,11 @@ class Motifs:
         chosen = np.minimum(np.searchsorted(total, marks, side="right"), len(total) - 1)
         return [_members(self.bits[w, k]) for w in chosen]
 
-    def share(self, p_of, k):
-        """(share, low, high) of the motifs with p at most ALPHA, 95 %, on Kish's number."""
+    def share(self, references, k):
+        """(share, low, high) of the motifs with p at most ALPHA, 95 %, on Kish's number.
+
+        The mean over the references, each a function giving the p of a motif.
+        """
         w = self.weight[:, k]
         seen = np.flatnonzero(w > 0)
         pairs = {}
@@ -97,8 +107,10 @@ class Motifs:
             pair = (int(self.joins[i, k]), int(self.strands[i, k]))
             pairs[pair] = pairs.get(pair, 0.0) + w[i]
         n = int(COUNTS[k])
-        hit = sum(v for (j, s), v in pairs.items() if p_of(n, j, s) <= ALPHA)
-        return interval(hit / w.sum(), effective_size(w))
+        hits = [
+            sum(v for (j, s), v in pairs.items() if p_of(n, j, s) <= ALPHA) for p_of in references
+        ]
+        return interval(float(np.mean(hits)) / w.sum(), effective_size(w))
 
 
 def interval(share, count):
@@ -114,10 +126,10 @@ def cell(got, target=None, where=""):
     return f"{mark}{share:.1f}{mark} ({low:.1f}–{high:.1f})"
 
 
-def motifs_of(shares, x, family, key, walks=WALKS):
+def motifs_of(shares, x, family, key, walks=WALKS, recorded=None):  # noqa: PLR0917
     """Simulate motifs; without emergence an impossible gain goes to the other transmission."""
     spill = "transmission" if shares[0] == 0.0 else "emergence"
-    model = SpreadModel(GRAPH, x, shares=shares, family=family, spill=spill)
+    model = SpreadModel(GRAPH, x, shares=shares, family=family, spill=spill, recorded=recorded)
     tables = chain_tables(model, cap_for(model, int(COUNTS[-1])))
     pieces = range(0, walks, 100)
 
@@ -136,13 +148,14 @@ def known(x):
     return ConfidenceSet((Point(float("inf"), None, x, (x,)),), 0.0, None, None)
 
 
-def worlds(confidence, family, **more):
-    more = {"walks": REFERENCE, "seed": 5, **more}
-    what = Transmission(GRAPH, confidence, family=family, **more)
-    return scatter_worlds(what, COUNTS, largest=int(COUNTS[-1]), pool=POOL)
+def worlds(confidence, family, seeds=SEEDS, **more):
+    """Give the references, one for each seed."""
+    more = {"walks": REFERENCE, **more}
+    whats = [Transmission(GRAPH, confidence, family=family, seed=s, **more) for s in seeds]
+    return [scatter_worlds(what, COUNTS, largest=int(COUNTS[-1]), pool=POOL) for what in whats]
 
 
-def by(world, name):
+def p_of(world, name):
     """p of a motif: few joins against contact, or scatter or plain strands against both."""
     if name == "contact":
         return lambda n, j, _: world.p("contact", "joins", n, j)
@@ -151,9 +164,13 @@ def by(world, name):
     return lambda n, j, s: world.p_scatter(n, joins=j, strands=s)
 
 
-def row(start, motifs, p_of, target=None):
+def by(references, name):
+    return [p_of(world, name) for world in references]
+
+
+def row(start, motifs, references, target=None):
     cells = [
-        cell(motifs.share(p_of, k), target, f"{', '.join(start)}, {n} holders")
+        cell(motifs.share(references, k), target, f"{', '.join(start)}, {n} holders")
         for k, n in enumerate(COUNTS)
     ]
     say(f"| {' | '.join((*start, *cells))} |")
@@ -178,23 +195,111 @@ def mixed(inheritance):
 
 
 def contact_level(truths, reference):
-    say("", "## Contact alone: P(p_against_contact ≤ .05)")
-    head("x", "the tool has")
-    rng = np.random.default_rng(8)
+    say("", "## Contact alone: P(p_against_contact ≤ .05), x known")
+    head("x")
     for x in TURNOVERS:
         motifs = truths["compact", mixed(0.0), x]
-        row((f"{x}", "x"), motifs, by(reference["compact", x], "contact"), MOST)
-        for _ in range(FITS):
-            counts = rng.choice(made.N + 1, 800, p=log_series(x, made.N))
-            fitted = confidence_set(Prevalence(counts, made.N), recording="complete")
-            point = fitted.points[0]
-            said = f"fit {point.centre:.3f} ({point.turnovers[0]:.3f}–{point.turnovers[-1]:.3f})"
+        row((f"{x}",), motifs, by(reference["compact", x], "contact"), MOST)
+
+
+def fitted_level(truths):
+    say(
+        "",
+        "## Turnover fitted to a catalogue",
+        "",
+        f"Each line has a catalogue of its own of {CATALOGUE} motifs (3 holders and more are "
+        "fitted) and one reference; p is the worst case over the confidence set. Everything "
+        "recorded. Against contact: motifs of contact alone; against transmission: the inheritance "
+        "share named. Compact families; *split* where said.",
+    )
+    head("x", "fit", "truth", "against")
+    rng = np.random.default_rng(8)
+    for number, x in enumerate(np.repeat(TURNOVERS, FITS)):
+        counts = rng.choice(made.N + 1, CATALOGUE, p=log_series(x, made.N))
+        fitted = confidence_set(Prevalence(counts, made.N), recording="complete")
+        kind = "split" if number % FITS == 0 else "compact"
+        reference = worlds(fitted, FAMILY[kind], SEEDS[:1])
+        for truth, share, name in (
+            ("contact", 0.0, "contact"),
+            ("inheritance .25", 0.25, "scatter"),
+            ("inheritance .4", 0.4, "scatter"),
+            ("inheritance .5", 0.5, "scatter"),
+        ):
+            against = "contact" if name == "contact" else f"transmission ({kind})"
             row(
-                (f"{x}", said),
-                motifs,
-                by(worlds(fitted, None), "contact"),
+                (f"{x}", told(fitted), truth, against),
+                truths[kind, mixed(share), x],
+                by(reference, name),
                 MOST,
             )
+
+
+def told(fitted):
+    point = fitted.points[0]
+    said = f"x {point.centre:.3f} ({point.turnovers[0]:.3f}–{point.turnovers[-1]:.3f})"
+    kappas = [p.kappa for p in fitted.points]
+    if np.isfinite(kappas[0]):
+        said += f", κ {' '.join(f'{k:.3g}' for k in kappas)}"
+    return said
+
+
+def recorded_catalogue(x, recorded, key):
+    """Counts and row totals of a catalogue of contact alone, holders recorded as ``recorded``."""
+    rng = np.random.default_rng(key)
+    true = rng.choice(made.N + 1, CATALOGUE, p=log_series(x, made.N))
+    wanted, many = np.unique(true, return_counts=True)
+    tables = chain_tables(SpreadModel(GRAPH, x), cap_for(SpreadModel(GRAPH, x), int(wanted[-1])))
+    words = spread_words(key, 0, 600, key=(int(Stream.POWER), 77))
+    got = walk_chunk(tables, words, wanted.astype(np.int32))
+    counts, totals = [], np.zeros(made.N, dtype=np.int64)
+    for k, times in enumerate(many):
+        total = np.cumsum(got.weight[:, k])
+        marks = rng.uniform(size=times) * total[-1]
+        for walk in np.minimum(np.searchsorted(total, marks, side="right"), len(total) - 1):
+            members = _members(got.bits[walk, k])
+            seen = members[rng.uniform(size=len(members)) < recorded[members]]
+            counts.append(len(seen))
+            totals[seen] += 1
+    return np.array(counts), totals
+
+
+def recording_level():
+    say(
+        "",
+        "## Turnover and recording both fitted",
+        "",
+        f"Effort is log-normal (sd of its logarithm {EFFORT_SD}); a holder is recorded with "
+        f"probability 1 − exp(−κ effort), {100 * RECORDED:.0f} % on average. Each line group has a "
+        f"catalogue of its own of {CATALOGUE} true motifs of contact alone, recorded so; x and κ "
+        "are both fitted to it (κ: the points of the confidence set), one reference each. Motifs "
+        "are taken by their *recorded* holders. The last two lines of a group are power.",
+    )
+    head("x", "fit", "truth", "against")
+    rng = np.random.default_rng(18)
+    effort = np.exp(EFFORT_SD * rng.normal(size=made.N))
+    kappa = brentq(lambda k: recorded_probability(effort, k).mean() - RECORDED, 1e-3, 1e3)
+    recorded = recorded_probability(effort, kappa)
+    family, truths = FAMILY["compact"], {}
+    for number, x in enumerate((0.9, 0.9, 0.98, 0.98)):
+        counts, totals = recorded_catalogue(x, recorded, 40 + number)
+        what = Prevalence(counts, made.N, effort, totals, np.full(made.N, len(counts)))
+        fitted = confidence_set(what)
+        said = f"{told(fitted)} (true κ {kappa:.3g})"
+        reference = worlds(fitted, family, SEEDS[:1])
+        for key, (truth, shares, name, target) in enumerate(
+            (
+                ("contact", mixed(0.0), "contact", MOST),
+                ("contact", mixed(0.0), "scatter", MOST),
+                ("inheritance .25", mixed(0.25), "scatter", MOST),
+                ("inheritance .5", mixed(0.5), "scatter", MOST),
+                ("a third emergence", EMERGING["a third emergence"], "scatter", None),
+                ("emergence", EMERGING["emergence"], "scatter", None),
+            )
+        ):
+            if (shares, x) not in truths:
+                truths[shares, x] = motifs_of(shares, x, family, 900 + key, recorded=recorded)
+            against = "contact" if name == "contact" else "transmission"
+            row((f"{x}", said, truth, against), truths[shares, x], by(reference, name), target)
 
 
 def mixture_level(truths, reference):
@@ -203,8 +308,8 @@ def mixture_level(truths, reference):
     for kind in FAMILY:
         for x in TURNOVERS:
             for share in MIXTURES:
-                p_of = by(reference[kind, x], "scatter")
-                row((kind, f"{x}", f"{share:g}"), truths[kind, mixed(share), x], p_of, MOST)
+                scatter = by(reference[kind, x], "scatter")
+                row((kind, f"{x}", f"{share:g}"), truths[kind, mixed(share), x], scatter, MOST)
 
 
 def power(truths, reference):
@@ -239,13 +344,13 @@ def closer():
         "grid of inheritance shares and with .4 added to it.",
     )
     head("inheritance", "grid")
-    family, p_of = FAMILY["split"], {}
+    family, references = FAMILY["split"], {}
     for name, grid in (("five", INHERITANCE), ("with .4", (*INHERITANCE, 0.4))):
-        world = worlds(known(0.9), family, walks=40_000, seed=77, inheritance=grid)
-        p_of[name] = by(world, "scatter")
+        world = worlds(known(0.9), family, (77,), walks=40_000, inheritance=grid)
+        references[name] = by(world, "scatter")
     for number, share in enumerate((0.25, 0.4, 0.5)):
         motifs = motifs_of(mixed(share), 0.9, family, 800 + number, 16_000)
-        for name, of in p_of.items():
+        for name, of in references.items():
             row((f"{share:g}", name), motifs, of, MOST)
 
 
@@ -259,7 +364,7 @@ def misstated(truths):
     )
     head("true x", "taken x", "truth", "against")
     for x, taken in ((0.5, 0.75), (0.9, 0.8), (0.9, 0.95), (0.98, 0.96), (0.98, 0.99)):
-        wrong = worlds(known(taken), FAMILY["compact"])
+        wrong = worlds(known(taken), FAMILY["compact"], SEEDS[:1])
         for truth, shares, name, target in (
             ("contact", mixed(0.0), "contact", MOST),
             ("half contact, half inheritance", mixed(0.5), "scatter", MOST),
@@ -276,6 +381,7 @@ def misstated(truths):
 RIGHT = {
     "contact": ("contact spread",),
     "inheritance": ("contact or ancestry",),
+    "inheritance, pure": ("contact or ancestry",),
     "half contact, half inheritance": ("contact spread", "contact or ancestry"),
     "emergence": ("parallel emergence",),
     "a tenth emergence": ("several origins, then spread",),
@@ -286,6 +392,7 @@ ORIGINS = ("parallel emergence", "several origins, then spread")
 WRONG = {
     "contact": ORIGINS,
     "inheritance": ("contact spread", *ORIGINS),
+    "inheritance, pure": ("contact spread", *ORIGINS),
     "half contact, half inheritance": ORIGINS,
     "emergence": (*SPREAD, "several origins, then spread"),
     "a tenth emergence": ("parallel emergence",),
@@ -293,21 +400,32 @@ WRONG = {
 }
 
 
-def judge_at(x):
+def judge_at(x, levels):
     """The judge of power, on this place: plain p at .05, equal propensities."""
     ones = np.ones(made.N)
-    levels = FAMILY["compact"]
     group = SimpleNamespace(graph=GRAPH, family_codes=levels, level_codes=levels, n=made.N)
     emergence = emergence_world(GRAPH, levels, ones, COUNTS, draws=9999, seed=5, pool=POOL)
     study = SimpleNamespace(plan=Plan(), families=True)
     ground = SimpleNamespace(group=group, propensity=ones)
-    return Judge(study, ground, emergence, worlds(known(x), levels))
+    return Judge(study, ground, emergence, worlds(known(x), levels, SEEDS[:1])[0])
+
+
+def even_families():
+    """Families by the nearest of sixty traditions: some seventeen each, none over forty."""
+    xyz = PLACE.xyz
+    seeds = xyz[np.random.default_rng(9).choice(made.N, made.FAMILIES, replace=False)]
+    return ((xyz[:, None] - seeds[None]) ** 2).sum(axis=2).argmin(axis=1).astype(np.int32)
+
+
+def pure_inheritance(motifs):
+    """The same motifs without those in which a gain went by contact."""
+    return replace(motifs, weight=motifs.weight * (motifs.gains[:, :, 1] == 0))
 
 
 def confusion():
     say(
         "",
-        "## Verdicts by truth, x = .95 known, compact families",
+        "## Verdicts by truth, x = .95 known",
         "",
         f"{MOTIFS} motifs a row, plain p ≤ .05, per cent. Right is the verdict named for the truth "
         "(contact: contact spread; inheritance: contact or ancestry; half and half: either of "
@@ -315,45 +433,64 @@ def confusion():
         "spread). Wrong definite: *parallel emergence* or *several origins* where nothing emerged "
         "twice; *contact spread* where only inheritance was at work; any verdict with spread where "
         "all emerged; *parallel emergence* where most gains were contact. Seeing only the spread "
-        "of a mixed motif is counted as incomplete, not as wrong; undecided is neither.",
+        "of a mixed motif is counted as incomplete, not as wrong; undecided is neither. Where a "
+        "family is full, inheritance has nobody left and the gain goes by contact: *inheritance, "
+        "pure* leaves out the motifs to which that happened (where fewer than 100 effective "
+        "motifs are left there is no row).",
+    )
+    out: dict[tuple[str, str, int], tuple] = {}
+    verdicts_of("compact families, a quarter of the traditions in one", FAMILY["compact"], out)
+    verdicts_of("even families of about seventeen", even_families(), out)
+    pure = ("contact", "inheritance, pure", "emergence")
+    late = {t: r for t, (r, _) in out.items() if t[1] in pure and t[2] >= 30}
+    short = [f"{t} at {n} ({kind})" for (kind, t, n), r in late.items() if r[0] < 0.8]
+    over = [
+        f"{t} at {n} ({kind})"
+        for (kind, t, n), (_, w) in out.items()
+        if w[0] > 0.05 and t != "inheritance"
+    ]
+    say(
+        "",
+        f"Target of 80 % right for pure routes from 30 holders on missed: "
+        f"{'; '.join(short) or 'nowhere'}. Target of at most 5 % wrong definite verdicts missed "
+        f"(inheritance as *pure*): {'; '.join(over) or 'nowhere'}.",
+    )
+
+
+def verdicts_of(kind, family, out):
+    say(
+        "",
+        f"With {kind}:",
         "",
         f"| truth | holders | {' | '.join(VERDICTS)} | right | wrong definite |",
         "|---" * (len(VERDICTS) + 4) + "|",
     )
-    judge, rng, out, spilt = judge_at(0.95), np.random.default_rng(3), {}, []
+    judge, rng = judge_at(0.95, family), np.random.default_rng(3)
     routes = {
         "contact": mixed(0.0),
         "inheritance": mixed(1.0),
+        "inheritance, pure": mixed(1.0),
         "half contact, half inheritance": mixed(0.5),
         **EMERGING,
     }
+    motifs = {}
     for number, (truth, shares) in enumerate(routes.items()):
-        motifs = motifs_of(shares, 0.95, FAMILY["compact"], 500 + number)
+        if shares not in motifs:
+            motifs[shares] = motifs_of(shares, 0.95, family, 500 + number)
+        some = motifs[shares]
+        if truth.endswith("pure"):
+            some = pure_inheritance(some)
         for k, n in enumerate(COUNTS):
-            got = judge.verdicts(motifs.sets(k, rng), POOL)
             # Systematic resampling repeats heavy walks: no more motifs than the weights are worth.
-            count = min(MOTIFS, effective_size(motifs.weight[:, k]))
+            count = min(MOTIFS, effective_size(some.weight[:, k]))
+            if count < 100:
+                continue
+            got = judge.verdicts(some.sets(k, rng), POOL)
             said = " | ".join(f"{100 * got.count(v) / MOTIFS:.1f}" for v in VERDICTS)
             right = interval(sum(v in RIGHT[truth] for v in got) / MOTIFS, count)
             wrong = interval(sum(v in WRONG[truth] for v in got) / MOTIFS, count)
-            out[truth, int(n)] = right, wrong
-            if truth == "inheritance":
-                w = motifs.weight[:, k] / motifs.weight[:, k].sum()
-                spilt.append(f"{100 * (w @ (motifs.gains[:, k, 1] > 0)):.0f} % at {n}")
+            out[kind, truth, int(n)] = right, wrong
             say(f"| {truth} | {n} | {said} | {cell(right)} | {cell(wrong)} |")
-    pure = ("contact", "inheritance", "emergence")
-    late = {t: r for t, (r, _) in out.items() if t[0] in pure and t[1] >= 30}
-    short = [f"{t} at {n}" for (t, n), r in late.items() if r[0] < 0.8]
-    over = [f"{t} at {n}" for (t, n), (_, w) in out.items() if w[0] > 0.05]
-    say(
-        "",
-        f"Target of 80 % right for pure routes from 30 holders on missed: "
-        f"{'; '.join(short) or 'nowhere'}. "
-        f"Target of at most 5 % wrong definite verdicts missed: {'; '.join(over) or 'nowhere'}.",
-        "",
-        "Where a family is full, inheritance has nobody left and the gain goes by contact: of the "
-        f"motifs of inheritance alone, {', '.join(spilt)} holders had such a gain.",
-    )
 
 
 def test_the_spread_worlds_hold_their_level():
@@ -365,13 +502,14 @@ def test_the_spread_worlds_hold_their_level():
         "",
         "A made-up world of 1,000 traditions at random on the globe (`nearest:6`), 60 families of "
         "very unequal size, compact, or with branches of up to a dozen of the larger ones moved "
-        "far away. Everything recorded, equal propensities. Motifs: the weighted snapshots of "
+        "far away. Everything recorded and equal propensities, where nothing else is said. Motifs: the weighted snapshots of "
         f"{WALKS:,} walks in each cell (every snapshot counts by its weight, for the verdicts "
         "they are resampled systematically); references: "
-        f"{REFERENCE:,} walks of contact alone and {round(0.4 * REFERENCE):,} of each other "
-        "inheritance share, on other random numbers. Per cent of motifs, with 95 % "
+        f"{REFERENCE:,} walks of contact alone and {round(BESIDE * REFERENCE):,} of each other "
+        "inheritance share (the tool's default), on other random numbers; where nothing else is "
+        f"said, the mean over {len(SEEDS)} references. Per cent of motifs, with 95 % "
         "Clopper–Pearson intervals of the effective number of snapshots (Kish 1965); they leave "
-        "out the Monte Carlo error of the reference, which all motifs of a row share. **Bold**: "
+        "out the Monte Carlo error of the references, which all motifs of a row share. **Bold**: "
         "over the target of 6 %. No cell was dropped: walks are steered up to 100 holders even at "
         "x = .5. Coverage and rank histograms of the route shares are in "
         "[shares.md](shares.md).",
@@ -383,6 +521,8 @@ def test_the_spread_worlds_hold_their_level():
     worth = []
     contact_level(truths, reference)
     mixture_level(truths, reference)
+    fitted_level(truths)
+    recording_level()
     confusion()
     power(truths, reference)
     misstated(truths)

@@ -76,8 +76,8 @@ def test_short_runs_are_not_announced(catalogue):
     )
 
 
-def test_refused_turnover_and_no_holders_are_no_fault():
-    empty = catalogue_of([[], [3], [0, 1, 2]], 12, effort=np.ones(12))
+def test_motifs_that_scatter_says_nothing_of_are_no_fault():
+    empty = catalogue_of([[], [3], range(12)], 12, effort=np.ones(12))
     parts = cost.estimate(prepare(empty, Plan()), ThreadPool(2))
     assert "contact-only and transmission-only" not in parts
     assert parts["emergence-only"] == 0.0  # all enumerated

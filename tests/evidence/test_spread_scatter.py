@@ -5,7 +5,14 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from twicetold.evidence.confidence import BETA, ConfidenceSet, Point, Prevalence, confidence_set
+from twicetold.evidence.confidence import (
+    BETA,
+    PLAUSIBLE,
+    ConfidenceSet,
+    Point,
+    Prevalence,
+    confidence_set,
+)
 from twicetold.evidence.scatter import Transmission, at_reach, scatter_worlds
 from twicetold.references.pvalue import p_few, p_many
 from twicetold.spread.recording import recorded_probability
@@ -173,7 +180,26 @@ def test_confidence_set_with_recording():
     assert low.centre > first.centre > high.centre
 
 
-def test_confidence_set_refuses_with_the_fit():
+def test_too_few_motifs_leave_the_turnover_open_and_say_so():
     got = confidence_set(Prevalence([3, 4], 10))
-    assert not got.points
-    assert "Only 2 motifs" in got.refused
+    (point,) = got.points
+    assert got.assumed == PLAUSIBLE == (point.turnovers[0], point.turnovers[-1])
+    # The middle by ratio: as many times as far from 1 as the low end is, as the high end is nearer.
+    low, middle, high = (1.0 - x for x in point.turnovers)
+    assert low / middle == pytest.approx(middle / high)
+    assert point.centre == point.turnovers[1]
+    assert got.beta == 0.0
+    assert got.turnover is None
+    assert "Only 2 motifs have 3 holders or more" in got.notes[0]
+    assert "0.9 to 0.998" in got.notes[0]
+    assert "Only 1 motif has" in confidence_set(Prevalence([3], 10)).notes[0]
+
+
+def test_a_range_is_taken_as_given_whatever_the_counts():
+    got = confidence_set(
+        Prevalence(counts_of(0.95, 200, 400), 200), turnover=(0.5, 0.98), recording="complete"
+    )
+    assert got.points[0].turnovers == pytest.approx((0.5, 0.9, 0.98))
+    assert got.assumed == (0.5, 0.98)
+    assert got.turnover is None
+    assert got.notes == ()

@@ -6,18 +6,23 @@ import numpy as np
 import pandas as pd
 import pytest
 
+from subset_solver import Solver
 from twicetold.catalogue import read_catalogue
 from twicetold.evidence import rank_catalogue, spreading
 from twicetold.evidence import test_motif as one_motif
+from twicetold.evidence.confidence import PLAUSIBLE
 from twicetold.evidence.dynamics import dynamics
 from twicetold.evidence.power import HOPED, TRUTHS, at_holders, power_on, simulate, some_counts
 from twicetold.evidence.ranking import compute_worlds
 from twicetold.evidence.scatter import scatter_worlds
+from twicetold.evidence.spreading import banked_up_to
 from twicetold.evidence.study import prepare
 from twicetold.evidence.verdict import VERDICTS
 from twicetold.evidence.worlds import observe_motifs
+from twicetold.graph import build_graph
 from twicetold.plan import Plan
-from twicetold.spread.world import spread_world
+from twicetold.spread import SpreadModel, cap_for, chain_tables
+from twicetold.spread.world import expected_events, spread_world
 from twicetold.workers import ThreadPool
 
 SPREAD = ("emergence", "contact", "transmission")
@@ -106,15 +111,60 @@ def test_neither_workers_nor_the_cache_move_a_number(archipelago, monkeypatch):
         pd.testing.assert_frame_equal(tables[0], other, check_exact=True)
 
 
-def test_without_a_turnover_the_worlds_are_left_out_and_said(path_of_five):
-    plan = few(graph__rule="given", spread__turnover="fit", emergence__propensity="equal")
-    found = one_motif(read_catalogue(path_of_five), "M", plan, cache=False)
-    assert np.isnan(found.motifs["p_against_transmission"].iloc[0])
-    assert any("turnover" in note and "left out" in note for note in found.notes)
-    assert (
-        "not examined" in found.motifs["reason"].iloc[0]
-        or "rare" in (found.motifs["reason"].iloc[0])
+PATH_OF_FIVE = [(i, i + 1) for i in range(4)]
+
+
+def exact_p(x):
+    """P(joins <= 1 | 3 holders) on the path of five by linear algebra over all subsets."""
+    solved = Solver(5, PATH_OF_FIVE, x)
+    joins = {s: sum(i in s and j in s for i, j in PATH_OF_FIVE) for s in solved.time if len(s) == 3}
+    # A snapshot comes with the time spent in a set.
+    few_joins = sum(solved.time[s] for s, b in joins.items() if b <= 1)
+    return few_joins / sum(solved.time[s] for s in joins)
+
+
+@pytest.mark.parametrize(("turnover", "low", "high"), [((0.5, 0.9), 0.5, 0.9), ("fit", *PLAUSIBLE)])
+def test_an_open_turnover_gives_the_worst_exact_p_of_its_range(path_of_five, turnover, low, high):
+    # One motif has no prevalence curve: "fit" then leaves the turnover open likewise.
+    plan = few(
+        graph__rule="given",
+        spread__turnover=turnover,
+        evidence__walks=20_000,
+        emergence__propensity="equal",
     )
+    found = one_motif(read_catalogue(path_of_five), "M", plan, cache=False)
+    law = next(
+        c.law
+        for c in found.evidence[0].comparisons
+        if c.world == "contact" and c.statistic == "joins"
+    )
+    across = [exact_p(x) for x in np.linspace(low, high, 21)]
+    worst = max(across)
+    assert worst == across[-1] > min(across) + 0.02
+    p = found.motifs["p_against_contact"].iloc[0]
+    assert abs(p - worst) < 4 * np.sqrt(worst * (1 - worst) / law.effective)
+    assert found.fits["turnover_assumed_low"] == low
+    assert found.fits["turnover_assumed_high"] == high
+    said = any("too few" in n or "not fitted from fewer" in n for n in found.notes)
+    assert said == (turnover == "fit")
+
+
+def test_banks_go_beyond_three_hundred_holders_as_far_as_the_work_allows(monkeypatch):
+    lat, lon = np.zeros(900), np.arange(900) / 4.0
+    model = SpreadModel(build_graph(lat, lon, "nearest:2"), 0.9)
+    counts = np.array([2, 250, 400, 500, 800], dtype=np.int32)
+    assert banked_up_to(model, counts, 33_000) == 800
+    assert banked_up_to(model, counts[:2], 33_000) == 250
+    assert banked_up_to(model, counts[2:], 33_000) == 800
+    events = {
+        int(n): 1000 * expected_events(chain_tables(model, cap_for(model, int(n)))) for n in counts
+    }
+    for n in (400, 500, 800):
+        monkeypatch.setattr(spreading, "MOST_EVENTS", events[n])
+        assert banked_up_to(model, counts, 1000) == n
+    monkeypatch.setattr(spreading, "MOST_EVENTS", events[400] - 1)
+    assert banked_up_to(model, counts, 1000) == 250
+    assert banked_up_to(model, counts[2:], 1000) == 300
 
 
 def test_effort_counts_once(archipelago):

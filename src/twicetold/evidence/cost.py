@@ -17,7 +17,7 @@ import numpy.typing as npt
 
 from twicetold.evidence.propensities import group_propensity
 from twicetold.evidence.scatter import BESIDE
-from twicetold.evidence.spreading import MOST_HOLDERS, Ground, prepare_ground
+from twicetold.evidence.spreading import Ground, bank_walks, banked_up_to, prepare_ground
 from twicetold.evidence.study import Group, Study
 from twicetold.randomness import Stream, chunk_words
 from twicetold.references._engine import check_propensity, draw_chunk, make_engine
@@ -165,7 +165,7 @@ def _spread(study: Study, asked: set[str], threads: float) -> dict[str, float]:
     """Walks of the largest surveyed set, timed and scaled; other sets by their size."""
     first = max(study.groups, key=lambda g: (len(g.motifs), g.n))
     ground = prepare_ground(study, first)
-    if ground.confidence.refused or not len(ground.wanted):
+    if not len(ground.wanted):
         return {}
     others = sum(g.n for g in study.groups) / first.n
     out = {}
@@ -179,8 +179,9 @@ def _spread(study: Study, asked: set[str], threads: float) -> dict[str, float]:
     if "shares" in asked:
         from twicetold.evidence.shares.bank import estimate_cost
 
-        largest = min(int(ground.wanted[-1]), MOST_HOLDERS)
-        walking = estimate_cost(ground.model(study), largest=largest, workers=max(1, int(threads)))
+        model, walks = ground.model(study), bank_walks(study)
+        largest = banked_up_to(model, ground.wanted, walks)
+        walking = estimate_cost(model, largest=largest, walks=walks, workers=max(1, int(threads)))
         out["route shares"] = (walking + LEARNING) * others
     return out
 

@@ -73,12 +73,15 @@ class PowerTable:
     alpha : float
         Level of each test.
     turnover : float
+    notes : tuple of str
+        What must be known of the turnover and recording it rests on.
     """
 
     frame: pd.DataFrame
     smallest: pd.DataFrame
     alpha: float
     turnover: float
+    notes: tuple[str, ...] = ()
 
     def to_frame(self) -> pd.DataFrame:
         """Give a copy of ``frame``."""
@@ -163,7 +166,7 @@ def catalogue_power(
     Raises
     ------
     TwicetoldError
-        When the turnover can be neither fitted nor read from the plan.
+        When no motif is held by two traditions or more and not by all.
     """
     pool = pool or ThreadPool()
     study = prepare(catalogue, plan or Plan())
@@ -192,7 +195,8 @@ def power_on(study: Study, ground: Ground, worlds: ScatterWorlds, pool: Pool) ->
             rows += [_row(n, truth, v, got.count(v), len(got)) for v in VERDICTS if got]
     frame = pd.DataFrame(rows)
     turnover = float(ground.confidence.points[0].centre)
-    return PowerTable(frame, _smallest(frame), study.plan.evidence.alpha, turnover)
+    alpha, notes = study.plan.evidence.alpha, ground.confidence.notes
+    return PowerTable(frame, _smallest(frame), alpha, turnover, notes)
 
 
 def some_counts(wanted: npt.NDArray[np.int32]) -> list[int]:
@@ -207,13 +211,11 @@ def main_ground(study: Study) -> Ground:
     Raises
     ------
     TwicetoldError
-        When it has no turnover.
+        When there is no count that any power could be told of.
     """
     main = main_set(study)
     group = next(g for g in study.groups if study.catalogue.surveyed_of[g.motifs[0]] == main)
     ground = prepare_ground(study, group)
-    if ground.confidence.refused:
-        raise TwicetoldError(ground.confidence.refused)
     if not len(ground.wanted):
         raise TwicetoldError(
             "No motif is held by two traditions or more and not by all: there is nothing whose "

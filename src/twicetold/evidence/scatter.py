@@ -256,7 +256,6 @@ def scatter_worlds(
     Parameters
     ----------
     what : Transmission
-        Its ``confidence`` must not be refused.
     counts : sequence of int
         Recorded counts, 1 .. ``largest``.
     largest : int

@@ -22,12 +22,14 @@ from twicetold.evidence.shares import build_bank, fit_posterior
 from twicetold.evidence.study import Group, Study
 from twicetold.evidence.worlds import ObservedMotifs
 from twicetold.references.pvalue import p_many
-from twicetold.spread import SpreadModel
+from twicetold.spread import SpreadModel, cap_for, chain_tables
 from twicetold.spread.turnover import FEWEST
+from twicetold.spread.world import expected_events
 from twicetold.workers import Pool
 
-#: Route shares are given for up to this many holders; a bank's cost grows with its square.
-MOST_HOLDERS = 300
+#: Route shares are given for up to this many holders on any map, and for more as long as the walks
+#: of a bank stay within so many events (some twenty minutes of one processor).
+MOST_HOLDERS, MOST_EVENTS = 300, 1e10
 #: Walks of a bank for each walk of the plan (which speaks of one world; a bank holds all shares).
 BANK_WALKS = 3.3
 #: Surveyed sets that get a bank of their own: those with the most motifs.
@@ -128,7 +130,7 @@ def invention_rates(study: Study, ground: Ground) -> npt.NDArray[np.float64]:
     as its offset.
     """
     rule, propensity = study.plan.emergence.propensity, ground.propensity
-    if ground.confidence.points and ground.confidence.points[0].recorded is None:
+    if ground.confidence.points[0].recorded is None:
         return propensity
     if rule == "covariates" and study.catalogue.effort is not None:
         return propensity / study.catalogue.effort[ground.group.traditions]
@@ -171,9 +173,6 @@ def against_spread(
         if first:
             fits, tables, prevalence = described(ground)
         notes += ground.confidence.notes
-        if ground.confidence.refused:
-            notes.append(_without_turnover(ground))
-            continue
         if not ground.own_fit:
             notes.append(
                 "Where traditions were searched for too few motifs to fit a turnover, it was "
@@ -253,13 +252,6 @@ def prepare_ground(study: Study, group: Group) -> Ground:
     return Ground(group, counts, confidence, group_propensity(study, group).shared, own)
 
 
-def _without_turnover(ground: Ground) -> str:
-    return (
-        f"{ground.confidence.refused} Until then, contact-only, transmission-only and route "
-        "shares are left out."
-    )
-
-
 def _compare(
     study: Study,
     group: Group,
@@ -327,14 +319,41 @@ def _give_shares(
     study: Study, ground: Ground, pool: Pool, cache: bool, into: dict[int, RouteShares]
 ) -> None:
     """Add each motif's posterior of the route shares."""
-    seed = study.plan.evidence.seed
-    largest = min(int(ground.wanted[-1]), MOST_HOLDERS)
-    walks = round(BANK_WALKS * study.plan.evidence.walks)
-    bank = build_bank(
-        ground.model(study), largest=largest, seed=seed, pool=pool, walks=walks, use_cache=cache
-    )
+    seed, walks = study.plan.evidence.seed, bank_walks(study)
+    model = ground.model(study)
+    largest = banked_up_to(model, ground.wanted, walks)
+    bank = build_bank(model, largest=largest, seed=seed, pool=pool, walks=walks, use_cache=cache)
     told = fit_posterior(bank, seed=seed, pool=pool).posterior(ground.group.holders)
     into |= dict(zip(ground.group.motifs, told, strict=True))
+
+
+def bank_walks(study: Study) -> int:
+    """Walks of a bank under the plan."""
+    return round(BANK_WALKS * study.plan.evidence.walks)
+
+
+def banked_up_to(model: SpreadModel, counts: npt.NDArray[np.int32], walks: int) -> int:
+    """Largest count a bank covers: see :data:`MOST_HOLDERS`.
+
+    Parameters
+    ----------
+    model : SpreadModel
+    counts : (K,) int32
+        Counts of the catalogue, increasing, at least one.
+    walks : int
+    """
+    within = int(counts[counts <= MOST_HOLDERS][-1]) if counts[0] <= MOST_HOLDERS else MOST_HOLDERS
+    beyond = counts[counts > MOST_HOLDERS].tolist()
+    # A walk has the more events the higher it is led, so the first one over the limit ends it.
+    low, high = 0, len(beyond)
+    while low < high:
+        middle = (low + high) // 2
+        tables = chain_tables(model, cap_for(model, int(beyond[middle])))
+        if walks * expected_events(tables) <= MOST_EVENTS:
+            low = middle + 1
+        else:
+            high = middle
+    return int(beyond[low - 1]) if low else within
 
 
 def described(
@@ -345,7 +364,7 @@ def described(
     turnover, recording = confidence.turnover, confidence.recording
     fits: dict[str, object] = {}
     tables: dict[str, pd.DataFrame] = {}
-    if turnover is not None and not turnover.refused:
+    if turnover is not None:
         fits |= {
             "turnover": turnover.turnover,
             "turnover_low": turnover.low,
@@ -355,12 +374,12 @@ def described(
             "turnover_dispersion": turnover.dispersion,
         }
         tables["turnover_fit"] = turnover.classes
-    elif turnover is None and confidence.points:
+    else:
         fits["turnover"] = confidence.points[0].centre
-    if confidence.points:
-        point = confidence.points[0]
-        mean = 1.0 if point.recorded is None else float(point.recorded.mean())
-        fits["mean_recorded"] = mean
+    if confidence.assumed is not None:
+        fits["turnover_assumed_low"], fits["turnover_assumed_high"] = confidence.assumed
+    point = confidence.points[0]
+    fits["mean_recorded"] = 1.0 if point.recorded is None else float(point.recorded.mean())
     if recording is not None and not recording.refused:
         fits |= {
             "recording_rate": recording.kappa,
@@ -373,7 +392,7 @@ def described(
 def _prevalence(ground: Ground) -> pd.DataFrame | None:
     seen = np.bincount(ground.counts, minlength=ground.group.n + 1)[1 : ground.group.n + 1]
     turnover = ground.confidence.turnover
-    if turnover is None or turnover.refused:
+    if turnover is None:
         return None
     curve = turnover.curve()
     curve.insert(1, "motifs", seen)

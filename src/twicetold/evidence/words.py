@@ -134,4 +134,6 @@ def tell_power(table: PowerTable) -> str:
         fewest = float(found["holders"])
         n = "more than were looked at" if math.isnan(fewest) else f"{fewest:.0f}"
         lines.append(f"  {found['truth']} seen as {found['verdict']}: {n}")
+    if table.notes:
+        lines += ["", *table.notes]
     return "\n".join(lines)

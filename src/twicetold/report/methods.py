@@ -192,7 +192,19 @@ def _spread(ranking: Ranking) -> str:
         "emergence, and is lost again; it is a relative of the contact process "
         f"{cite('harris1974')} in which the number of holders follows a birth-death process."
     ]
-    if plan.spread.turnover == "fit":
+    assumed = [as_float(fits.get(f"turnover_assumed_{end}")) for end in ("low", "high")]
+    if known(assumed[0]):
+        why = (
+            "too few motifs have a prevalence to fit it to"
+            if plan.spread.turnover == "fit"
+            else "set beforehand"
+        )
+        out.append(
+            f"The ratio of gains to losses was left open from {number(assumed[0], 4)} to "
+            f"{number(assumed[1], 4)} ({why}): p-values are the largest in that range, route "
+            f"shares and bands those at {number(x, 4)}."
+        )
+    elif plan.spread.turnover == "fit":
         said = f" ({number(x)}" if known(x) else ""
         said += (
             f", 95 % interval {number(low, 4)} to {number(high, 4)}" if said and known(low) else ""
