@@ -13,7 +13,14 @@ import numpy as np
 import pytest
 
 from twicetold.evidence.shares import bank as bank_module
-from twicetold.evidence.shares import build_bank, cache_folder, clear_cache, estimate_cost
+from twicetold.evidence.shares import (
+    build_bank,
+    cache_folder,
+    clear_cache,
+    estimate_cost,
+    fit_posterior,
+)
+from twicetold.evidence.shares import cache as cache_module
 from twicetold.evidence.shares.bank import CHUNK, KEPT, draw_counts, draw_shares, drawn_density
 from twicetold.evidence.shares.cache import Entry, key_of, make_room, open_entry
 from twicetold.evidence.shares.simplex import _quadrature, hat_masses, simplex
@@ -141,6 +148,50 @@ def test_cache_gives_the_same_bank_and_walks_nothing_twice(monkeypatch):
 
     monkeypatch.setattr(bank_module, "walk", nothing)
     same(plain, build_bank(model, largest=15, seed=1, walks=120))
+
+
+def test_a_bank_that_was_learnt_from_is_not_read_until_looked_at(monkeypatch):
+    arguments = {"largest": 15, "seed": 1, "walks": 120}
+    first = build_bank(ladder_model(), **arguments)
+    learnt = fit_posterior(first, seed=1, steps=5)
+    read = []
+    real = Entry.read
+    monkeypatch.setattr(Entry, "read", lambda entry, name: read.append(name) or real(entry, name))
+    again = build_bank(ladder_model(), **arguments)
+    kept = fit_posterior(again, seed=1, steps=5)
+    assert read == ["model-1-2-5"]
+    np.testing.assert_array_equal(kept.ensemble.parameters, learnt.ensemble.parameters)
+    for name in ("knots", "prior", "centre", "marginal", "basis"):
+        kept_array = getattr(kept.where, name)
+        np.testing.assert_array_equal(kept_array, getattr(simplex(3), name))
+        assert not kept_array.flags.writeable
+    assert (again.walks, again.largest, again.routes) == (120, 15, 3)
+    same(first, again)
+    assert read[1:] == ["walks-00000", "walks-00001", "walks-00002"]
+
+
+@pytest.mark.parametrize("damage", ["flip", "cut", "empty"])
+def test_a_damaged_model_is_learnt_again(damage):
+    arguments = {"largest": 15, "seed": 1, "walks": 120}
+    learnt = fit_posterior(build_bank(ladder_model(), **arguments), seed=1, steps=5)
+    (path,) = cache_folder().glob("banks/*/model-*.bin")
+    whole = path.read_bytes()
+    broken = {"flip": whole[:-9] + bytes([whole[-9] ^ 1]) + whole[-8:], "cut": whole[:-50]}
+    path.write_bytes(broken.get(damage, b""))
+    again = fit_posterior(build_bank(ladder_model(), **arguments), seed=1, steps=5)
+    np.testing.assert_array_equal(again.ensemble.parameters, learnt.ensemble.parameters)
+    np.testing.assert_array_equal(again.sharpness, learnt.sharpness)
+    assert path.read_bytes() == whole
+
+
+def test_room_is_looked_for_when_an_entry_is_new(monkeypatch):
+    looked = []
+    monkeypatch.setattr(cache_module, "make_room", lambda *a, **k: looked.append(a))
+    for expected in (1, 1):
+        open_entry({"k": 1})
+        assert len(looked) == expected
+    open_entry({"k": 2}).finish()
+    assert len(looked) == 3
 
 
 def test_interrupt_keeps_what_is_done(monkeypatch):

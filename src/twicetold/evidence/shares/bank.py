@@ -10,6 +10,7 @@ from __future__ import annotations
 import dataclasses
 import time
 from dataclasses import dataclass
+from functools import cached_property
 from typing import Any
 
 import numpy as np
@@ -35,6 +36,8 @@ KEPT = 12
 SMALLEST = 2
 #: Counts are drawn up to this many times the largest: the network is weakest at the ends.
 _BEYOND = 1.15
+#: Pieces whose names start so hold a model learnt from the whole bank.
+MODEL = "model-"
 #: Walks timed to estimate what a bank will cost.
 _TIMED = CHUNK
 #: Part of the walks drawn flat; the rest goes to corners and edges, where a flat draw is thin.
@@ -47,41 +50,83 @@ _CORNER, _EDGE = 7, 6
 class Bank:
     """Summaries of snapshots over the simplex of shares. Arrays are read-only.
 
+    A bank whose model was learnt already is not read from the disk until somebody looks at it.
+
     Parameters
     ----------
-    shares : (W, 3) float64
-        Shares of emergence, contact and inheritance of each walk.
-    prior : (W,) float64
-        Flat density over the density the walk's shares were drawn from.
-    counts : (W, K) int32
-        Recorded counts each walk was asked for.
-    weight : (W, K) float64
-        The walk's total weight for the count, times the count (about even over counts); 0 where
-        the walk never visited it.
-    summaries : (W, K, S) float32
-        Columns :data:`SUMMARIES`; zeros where the weight is 0.
-    largest : int
-        Largest count covered.
-    routes : int
-        3, or 2 without families.
-    map : Landscape
-        What summaries of further holder sets need.
+    shared : _Shared
+        What the walks are made of.
+    pool : Pool
+        What reads or makes them.
     """
 
-    shares: FloatArray
-    prior: FloatArray
-    counts: npt.NDArray[np.int32]
-    weight: FloatArray
-    summaries: npt.NDArray[np.float32]
-    largest: int
-    routes: int
-    map: Landscape
-    entry: Entry | None = None
+    shared: _Shared
+    pool: Pool
+
+    @cached_property
+    def arrays(self) -> dict[str, npt.NDArray[Any]]:
+        """All arrays by name; made, or read from the cache, on the first look."""
+        keys = list(range(-(-self.shared.walks // CHUNK)))
+        parts = list(self.pool.run(_chunk, self.shared, keys, label="walking the shares bank"))
+        joined = {name: np.concatenate([part[name] for part in parts]) for name in parts[0]}
+        for array in joined.values():
+            array.flags.writeable = False
+        if self.entry is not None:
+            self.entry.finish()
+        return joined
+
+    @property
+    def shares(self) -> FloatArray:
+        """(W, 3) shares of emergence, contact and inheritance of each walk."""
+        return self.arrays["shares"]
+
+    @property
+    def prior(self) -> FloatArray:
+        """(W,) flat density over the density the walk's shares were drawn from."""
+        return self.arrays["prior"]
+
+    @property
+    def counts(self) -> npt.NDArray[np.int32]:
+        """(W, K) recorded counts each walk was asked for."""
+        return self.arrays["counts"]
+
+    @property
+    def weight(self) -> FloatArray:
+        """(W, K) total weight of the walk for the count, times the count (about even over counts).
+
+        0 where the walk never visited it.
+        """
+        return self.arrays["weight"]
+
+    @property
+    def summaries(self) -> npt.NDArray[np.float32]:
+        """(W, K, S) columns :data:`SUMMARIES`; zeros where the weight is 0."""
+        return self.arrays["summaries"]
 
     @property
     def walks(self) -> int:
         """Number of walks, W."""
-        return len(self.shares)
+        return self.shared.walks
+
+    @property
+    def largest(self) -> int:
+        """Largest count covered."""
+        return self.shared.largest
+
+    @property
+    def routes(self) -> int:
+        """3, or 2 without families."""
+        return self.shared.routes
+
+    @property
+    def map(self) -> Landscape:
+        """What summaries of further holder sets need."""
+        return self.shared.map
+
+    @property
+    def entry(self) -> Entry | None:
+        """Where the bank and its model are kept, if anywhere."""
+        return self.shared.entry
 
 
 @dataclass(frozen=True)
@@ -129,24 +174,11 @@ def build_bank(
         When fewer than two traditions are left or ``largest`` or ``walks`` cannot be used.
     """
     shared = _prepare(model, largest=largest, seed=seed, walks=walks, use_cache=use_cache)
-    keys = list(range(-(-walks // CHUNK)))
-    parts = list((pool or ThreadPool()).run(_chunk, shared, keys, label="walking the shares bank"))
-    joined = {name: np.concatenate([part[name] for part in parts]) for name in parts[0]}
-    for array in joined.values():
-        array.flags.writeable = False
-    if shared.entry is not None:
-        shared.entry.finish()
-    return Bank(
-        shares=joined["shares"],
-        prior=joined["prior"],
-        counts=joined["counts"],
-        weight=joined["weight"],
-        summaries=joined["summaries"],
-        largest=shared.largest,
-        routes=shared.routes,
-        map=shared.map,
-        entry=shared.entry,
-    )
+    bank = Bank(shared, pool or ThreadPool())
+    # Learnt already: the model is all that is asked for, and reading the walks takes half a second.
+    if shared.entry is None or not shared.entry.holds(MODEL):
+        _ = bank.arrays
+    return bank
 
 
 def _prepare(

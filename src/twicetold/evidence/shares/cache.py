@@ -82,6 +82,13 @@ class Entry:
             with suppress(OSError):
                 part.unlink()
 
+    def holds(self, prefix: str) -> bool:
+        """Whether there is a finished piece whose name starts so (it may still be damaged)."""
+        try:
+            return any(p.name.startswith(prefix) for p in self.folder.glob("*.bin"))
+        except OSError:
+            return False
+
     def touch(self) -> None:
         """Mark the entry as just used."""
         with suppress(OSError):
@@ -108,18 +115,23 @@ def cache_folder() -> Path:
 
 
 def open_entry(depends_on: Mapping[str, object]) -> Entry | None:
-    """Open (or make) the entry of what depends on just this; None when no folder can be made."""
+    """Open (or make) the entry of what depends on just this; None when no folder can be made.
+
+    Room is made for a new entry only: looking through a full cache takes longer than reading one.
+    """
     key = key_of(depends_on)
     try:
         root = cache_folder() / "banks"
         folder = root / key
+        known = folder.is_dir()
         folder.mkdir(parents=True, exist_ok=True, mode=0o700)
     except (OSError, RuntimeError) as err:  # RuntimeError: no home folder
         _log.warning("No cache can be kept (%s); the run goes on without.", err)
         return None
     entry = Entry(folder)
     entry.touch()
-    make_room(root, keep=key)
+    if not known:
+        make_room(root, keep=key)
     return entry
 
 
@@ -151,7 +163,10 @@ def kernel_version() -> str:
         *(here / f"{name}.py" for name in ("_kernels", "bank", "landscape")),
         *(
             here / f"{name}.py"
-            for name in ("_network_kernels", "features", "network", "posterior", "heldout")
+            for name in (
+                *("_network_kernels", "features", "network", "posterior", "heldout"),
+                "simplex",
+            )
         ),
         *(Path(spread.__file__).parent / f"{name}.py" for name in ("_kernels", "chain", "world")),
         *(package / f"{name}.py" for name in ("_sfc64", "randomness")),

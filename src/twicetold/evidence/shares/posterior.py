@@ -10,7 +10,7 @@ import numpy as np
 import numpy.typing as npt
 
 from twicetold.evidence.results import RouteShares
-from twicetold.evidence.shares.bank import SMALLEST, Bank, drawn_density
+from twicetold.evidence.shares.bank import MODEL, SMALLEST, Bank, drawn_density
 from twicetold.evidence.shares.features import Scale, features, fit_scale, holder_knots
 from twicetold.evidence.shares.heldout import HeldOut, at_knots, sharpened
 from twicetold.evidence.shares.landscape import Landscape
@@ -28,6 +28,8 @@ HELD_OUT = 10
 MEMBERS, STEPS = 2, 3500
 #: Snapshots turned into features at a time.
 _BLOCK = 20_000
+#: Arrays of the simplex, kept with a model: summing them up takes longer than all the rest.
+_OF_SIMPLEX = ("knots", "prior", "centre", "marginal", "basis")
 #: Shares are refused where intervals are on average wider than this part of the prior's.
 NARROWER = 0.95
 
@@ -43,6 +45,8 @@ class SharesModel:
         3, or 2 without families.
     largest : int
         Largest number of holders it was made for.
+    where : Simplex
+        The simplex the densities stand on.
     scale : Scale
     ensemble : Ensemble
     sharpness : (Q,) float64
@@ -54,15 +58,11 @@ class SharesModel:
     map: Landscape
     routes: int
     largest: int
+    where: Simplex
     scale: Scale
     ensemble: Ensemble
     sharpness: FloatArray
     width: FloatArray
-
-    @property
-    def where(self) -> Simplex:
-        """The simplex the densities stand on."""
-        return simplex(self.routes)
 
     def posterior(self, holder_sets: Sequence[IntArray]) -> list[RouteShares]:
         """Posterior of the shares for each holder set (local tradition indices).
@@ -165,7 +165,7 @@ def fit_posterior(
     steps : int
         Steps of each network's training.
     """
-    name = f"model-{seed}-{members}-{steps}"
+    name = f"{MODEL}{seed}-{members}-{steps}"
     found = None if bank.entry is None else bank.entry.read(name)
     if found is None:
         found = _learnt(bank, seed=seed, pool=pool or ThreadPool(), members=members, steps=steps)
@@ -173,12 +173,14 @@ def fit_posterior(
             bank.entry.write(name, found)
     for array in found.values():
         array.flags.writeable = False
+    where = Simplex(bank.routes, **{f: found[f"simplex_{f}"] for f in _OF_SIMPLEX})
     return SharesModel(
         map=bank.map,
         routes=bank.routes,
         largest=bank.largest,
+        where=where,
         scale=Scale(found["knots"], found["centre"], found["gain"]),
-        ensemble=Ensemble(found["sizes"], found["parameters"], simplex(bank.routes)),
+        ensemble=Ensemble(found["sizes"], found["parameters"], where),
         sharpness=found["sharpness"],
         width=found["width"],
     )
@@ -215,6 +217,7 @@ def _learnt(
     )
     sharpness = check.sharpness(where, knots)
     return {
+        **{f"simplex_{f}": getattr(where, f) for f in _OF_SIMPLEX},
         "knots": knots,
         "centre": scale.centre,
         "gain": scale.gain,
