@@ -502,7 +502,8 @@ def test_the_spread_worlds_hold_their_level():
         "",
         "A made-up world of 1,000 traditions at random on the globe (`nearest:6`), 60 families of "
         "very unequal size, compact, or with branches of up to a dozen of the larger ones moved "
-        "far away. Everything recorded and equal propensities, where nothing else is said. Motifs: the weighted snapshots of "
+        "far away. Everything recorded and equal propensities, where nothing else is said. Motifs: "
+        "the weighted snapshots of "
         f"{WALKS:,} walks in each cell (every snapshot counts by its weight, for the verdicts "
         "they are resampled systematically); references: "
         f"{REFERENCE:,} walks of contact alone and {round(BESIDE * REFERENCE):,} of each other "

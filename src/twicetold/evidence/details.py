@@ -10,6 +10,7 @@ import numpy as np
 import numpy.typing as npt
 import pandas as pd
 
+from twicetold.evidence.alone import worlds_alone
 from twicetold.evidence.confounders import confounders
 from twicetold.evidence.study import Group, Study
 from twicetold.statistics import (
@@ -109,11 +110,14 @@ def motif_details(
         for part in parts.values():
             part["power"] = at_holders(power, len(part["holders"]))
     notes = list(beside.notes)
+    if whole and {"emergence", "contact"} <= set(study.plan.evidence.worlds):
+        tables["worlds_alone"], said = worlds_alone(table, study.plan.evidence.alpha)
+        notes += [said] if said else []
     if worlds.main is not None and whole and study.plan.sensitivity.stability:
         from twicetold.evidence.dynamics import dynamics
 
-        other, said = dynamics(study, observed, worlds, pool)
-        notes.append(said)
+        other, differ = dynamics(study, observed, worlds, pool)
+        notes.append(differ)
         if other is not None:
             tables["dynamics"] = other.frame
     return Details(

@@ -193,6 +193,7 @@ class ScatterWorlds:
             said.append(f"inheritance share {setting.inheritance:g}")
         if np.isfinite(setting.kappa):
             said.append(f"recording rate {setting.kappa:.4g}")
+        said.append(f"{law.effective:,.0f} effective draws")
         return Comparison(
             world=world,
             statistic=shown,

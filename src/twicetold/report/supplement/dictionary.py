@@ -141,6 +141,12 @@ _BY_TABLE: dict[str, tuple[Column, ...]] = {
         Column("verdict_spread_chain", "string", "Verdict by the spread chain."),
         Column("verdict_contact_process", "string", "Verdict by the contact process."),
     ),
+    "S4_worlds_alone": (
+        Column("emergence_only", "string", "Emergence-only at the plan's level: fits or rejected."),
+        Column("contact_only", "string", "Contact-only at the plan's level: fits or rejected."),
+        Column("motifs", "integer", "Testable motifs of which both are so."),
+        Column("share", "number", "Their share of the testable motifs."),
+    ),
     "S4_category_pairs": (
         Column("other", "string", "The category it is compared with."),
         Column("motifs", "integer", "Testable motifs of the category."),

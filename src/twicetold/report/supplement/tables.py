@@ -40,6 +40,7 @@ _TITLES = {
     "category_pairs": "Pairs of categories, compared at equal numbers of holders.",
     "needed": "Joins needed to tell contact or ancestry from emergence, by number of holders.",
     "turnover_fit": "Fit of the prevalence curve, by classes of holders.",
+    "worlds_alone": "How many motifs emergence alone, contact alone, either or neither reproduces.",
     "route_shares": "Shares of the routes over the catalogue and its categories.",
     "power": "What these traditions could show, by number of holders.",
 }
