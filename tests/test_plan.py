@@ -106,6 +106,17 @@ def test_any_mapping_gives_a_plan_or_a_plan_error(raw):
     assert plan_from_mapping(tomllib.loads(plan.to_toml())) == plan
 
 
+def test_a_range_of_turnovers_is_written_and_read_again(tmp_path):
+    plan = Plan().replace(spread__turnover=(0.95, 0.99))
+    assert "turnover = [0.95, 0.99]" in plan.to_toml()
+    file = tmp_path / "plan.toml"
+    file.write_text(plan.to_toml())
+    assert read_plan(file) == plan
+    record = json.loads(json.dumps({"plan": plan.to_mapping(), "by": "evidence", "seed": 1}))
+    (tmp_path / "run.json").write_text(json.dumps(record))
+    assert read_plan(tmp_path / "run.json") == plan
+
+
 class TestRunRecord:
     """A run.json stands for the plan it holds."""
 
