@@ -169,6 +169,7 @@ def test(
             page=page,
             force=force,
             cache=not no_cache,
+            tell_long=None if quiet else lambda line: typer.echo(line, err=True),
         )
     typer.echo(text)
 

@@ -51,6 +51,9 @@ __all__ = [
     "write_text",
 ]
 
+#: Traditions from which one motif may take minutes; a quarter of it, of its holders.
+LARGE = 1200
+
 
 def write_demonstration(folder: Path) -> Path:
     """Write the invented archipelago."""
@@ -143,14 +146,20 @@ def motif_run(
     page: Path | None = None,
     force: bool = False,
     cache: bool = True,
+    tell_long: Callable[[str], None] | None = None,
 ) -> str:
-    """Test one motif and say what came out, as text or as one JSON object."""
+    """Test one motif and say what came out, as text or as one JSON object.
+
+    ``tell_long`` hears of a long run before it begins.
+    """
     from twicetold.catalogue import read_catalogue
     from twicetold.evidence import test_motif
     from twicetold.evidence.words import tell
 
     with _claim(page, force=force) as claim:
         catalogue = read_catalogue(path, rules_of(plan))
+        if tell_long is not None and _large(catalogue):
+            _forewarn(catalogue, plan, pool, tell_long, motif)
         ranking = test_motif(catalogue, motif, plan, pool=pool, cache=cache)
         evidence = ranking.evidence[0]
         record = evidence_record(ranking, evidence)
@@ -207,12 +216,24 @@ def rank_run(
         return _said(ranking, out, seconds, moved)
 
 
-def _forewarn(catalogue: Catalogue, plan: Plan, pool: Pool, tell: Callable[[str], None]) -> None:
+def _large(catalogue: Catalogue) -> bool:
+    """Whether one motif may take minutes: only then is an estimate worth its second."""
+    return catalogue.n_traditions > LARGE or int(catalogue.attested.sum(axis=1).max()) > LARGE // 4
+
+
+def _forewarn(
+    catalogue: Catalogue,
+    plan: Plan,
+    pool: Pool,
+    tell: Callable[[str], None],
+    motif: str | None = None,
+) -> None:
     """Say before a long run what it will take."""
     from twicetold.evidence.cost import forewarning
     from twicetold.evidence.study import prepare
 
-    said = forewarning(prepare(catalogue, plan), pool)
+    only = None if motif is None else [catalogue.find_motif(motif)]
+    said = forewarning(prepare(catalogue, plan, motifs=only), pool)
     if said:
         tell(said)
 

@@ -9,8 +9,9 @@ import pytest
 
 from made_up import catalogue_of
 from small_world import put, small_world
+from twicetold import run
 from twicetold.catalogue import read_catalogue
-from twicetold.evidence import cost
+from twicetold.evidence import cost, spreading
 from twicetold.evidence.ranking import compute_worlds, judge
 from twicetold.evidence.study import prepare
 from twicetold.evidence.worlds import observe_motifs
@@ -81,6 +82,34 @@ def test_motifs_that_scatter_says_nothing_of_are_no_fault():
     parts = cost.estimate(prepare(empty, Plan()), ThreadPool(2))
     assert "contact-only and transmission-only" not in parts
     assert parts["emergence-only"] == 0.0  # all enumerated
+
+
+def test_one_motif_of_a_large_catalogue_is_told_of_too(tmp_path, monkeypatch):
+    source = put(small_world(), tmp_path / "tables")
+    plan = Plan().replace(evidence__draws=99, sensitivity__hidden=False, **TWO)
+    monkeypatch.setattr(cost, "_surely_short", lambda study: False)
+    monkeypatch.setattr(cost, "LONG", 0.0)
+    said: list[str] = []
+    motif = read_catalogue(source).motif_ids[0]
+    run.motif_run(source, motif, plan, pool=ThreadPool(1), cache=False, tell_long=said.append)
+    assert said == []
+    monkeypatch.setattr(run, "LARGE", 1)
+    run.motif_run(source, motif, plan, pool=ThreadPool(1), cache=False, tell_long=said.append)
+    assert len(said) == 1
+    assert "will take about" in said[0]
+
+
+def test_an_open_turnover_costs_a_walk_for_each_of_its_turnovers():
+    catalogue = catalogue_of([range(40), [3, 4]], 60, effort=np.ones(60))
+    walked = {}
+    for name, turnover in (("fit", "fit"), ("known", 0.9859)):
+        plan = Plan().replace(spread__turnover=turnover, evidence__walks=500)
+        study = prepare(catalogue, plan)
+        ground = spreading.prepare_ground(study, study.groups[0])
+        walked[name] = cost._more_walks(ground, study)
+    # At .998 a walk to 40 holders is some twice as long as at .986; at .9 half of it.
+    assert walked["known"] == cost.MORE_WALKS
+    assert 2.5 < walked["fit"] < 6.0
 
 
 def test_a_run_says_so_before_it_starts(tmp_path, monkeypatch):

@@ -174,7 +174,7 @@ def _spread(study: Study, asked: set[str], threads: float) -> dict[str, float]:
         worlds = len(what.shares) * len(what.confidence.points)
         walks = what.walks * (1 + BESIDE * (worlds - 1))
         each = _walk_seconds(ground, study, ground.wanted)
-        scattered = each * walks * MORE_WALKS * others / threads
+        scattered = each * walks * _more_walks(ground, study) * others / threads
         out["contact-only and transmission-only"] = scattered
     if "shares" in asked:
         from twicetold.evidence.shares.bank import estimate_cost
@@ -184,6 +184,19 @@ def _spread(study: Study, asked: set[str], threads: float) -> dict[str, float]:
         walking = estimate_cost(model, largest=largest, walks=walks, workers=max(1, int(threads)))
         out["route shares"] = (walking + LEARNING) * others
     return out
+
+
+def _more_walks(ground: Ground, study: Study) -> float:
+    """What is walked beyond one world at the fitted turnover, as a multiple of it."""
+    if ground.confidence.assumed is None:
+        return MORE_WALKS
+    # Turnovers so far apart are walked each for itself, and the higher ones much longer.
+    model, largest = ground.model(study), int(ground.wanted[-1])
+    events = [
+        expected_events(chain_tables(replace(model, turnover=x), cap_for(model, largest)))
+        for x in ground.confidence.points[0].turnovers
+    ]
+    return sum(events) / events[len(events) // 2]
 
 
 def _walk_seconds(ground: Ground, study: Study, counts: npt.NDArray[np.int32]) -> float:

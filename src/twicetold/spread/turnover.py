@@ -374,9 +374,10 @@ def _warning(motifs: int, fit_p: float, classes: pd.DataFrame, high: float, n: i
             "look like is then less certain than its interval says."
         )
     for row in off.itertuples():
+        ends = dict.fromkeys((str(row.from_holders), str(row.to_holders)))
         said.append(
-            f"Motifs with {row.from_holders} to {row.to_holders} holders: {row.observed:.0f} "
-            f"found, {row.expected:.1f} expected."
+            f"Motifs with {' to '.join(ends)} holders: {row.observed:.0f} found, "
+            f"{row.expected:.1f} expected."
         )
     if high >= 1.0 - 0.05 / n:
         said.append("The prevalence curve sets no upper bound below 1 to the turnover.")
