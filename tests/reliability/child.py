@@ -7,10 +7,11 @@ import sys
 from pathlib import Path
 
 
-def command(words: list[str], log: str) -> None:
+def command(words: list[str], log: str, env: dict[str, str]) -> None:
     """Run the console script with its output in a file; end with its exit code."""
     from twicetold import cli
 
+    os.environ.update(env)
     handle = os.open(log, os.O_CREAT | os.O_TRUNC | os.O_WRONLY)
     os.dup2(handle, 1)
     os.dup2(handle, 2)
