@@ -45,7 +45,7 @@ def worlds_alone(motifs: pd.DataFrame, alpha: float) -> tuple[pd.DataFrame, str]
     if not len(told):
         return table, ""
     said = (
-        f"Of {len(told):,} testable motifs, contact alone reproduces {either + contact_only:,} and "
+        f"Of {len(told):,} testable {'motif' if len(told) == 1 else 'motifs'}, contact alone reproduces {either + contact_only:,} and "
         f"emergence alone {either + emergence_only:,} (p over {alpha:g}): {either:,} either of "
         f"them, {neither:,} neither."
     )
