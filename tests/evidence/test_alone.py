@@ -38,7 +38,7 @@ def test_a_p_at_the_level_is_a_rejection_and_untold_motifs_do_not_count():
         frame((0.05, 0.1, 0.5), (0.5, NAN, 0.5), (0.5, 0.5, NAN), (NAN, 0.5, 0.5)), 0.05
     )
     assert table["motifs"].tolist() == [0, 0, 1, 0]
-    assert said.startswith("Of 1 testable motif, contact alone reproduces 0 ")
+    assert said.startswith("Of 1 testable motif, contact alone reproduces 1 and emergence alone 0 ")
 
 
 def test_nothing_to_tell():

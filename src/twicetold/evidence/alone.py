@@ -44,9 +44,10 @@ def worlds_alone(motifs: pd.DataFrame, alpha: float) -> tuple[pd.DataFrame, str]
     either, emergence_only, contact_only, neither = table["motifs"]
     if not len(told):
         return table, ""
+    what = "motif" if len(told) == 1 else "motifs"
     said = (
-        f"Of {len(told):,} testable {'motif' if len(told) == 1 else 'motifs'}, contact alone reproduces {either + contact_only:,} and "
-        f"emergence alone {either + emergence_only:,} (p over {alpha:g}): {either:,} either of "
-        f"them, {neither:,} neither."
+        f"Of {len(told):,} testable {what}, contact alone reproduces "
+        f"{either + contact_only:,} and emergence alone {either + emergence_only:,} "
+        f"(p over {alpha:g}): {either:,} either of them, {neither:,} neither."
     )
     return table, said
