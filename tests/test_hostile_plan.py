@@ -1,4 +1,9 @@
-"""Hostile plans, records, neighbour files and run folders: answers in words, no traceback."""
+"""Hostile plans, records, neighbour files and run folders: answers in words, no traceback.
+
+Many more, new ones every time, with counts for reports/reliability/hostile.md:
+
+    pytest -m calibration tests/test_hostile_plan.py
+"""
 
 from __future__ import annotations
 
@@ -8,6 +13,8 @@ import re
 import shutil
 import tempfile
 import time
+import tomllib
+import warnings
 from pathlib import Path
 
 import pytest
@@ -20,7 +27,7 @@ from twicetold.errors import GraphError, PlanError, TwicetoldError
 from twicetold.graph.exchange import read_neighbours
 from twicetold.plan import Plan, plan_from_mapping, read_plan, recorded_order
 from twicetold.report.common import page_name
-from twicetold.run import rank_run, supplement_run
+from twicetold.run import rank_run, resolved_plan, supplement_run
 from twicetold.workers import ThreadPool
 
 SECONDS = 5.0  # of processor time
@@ -51,14 +58,90 @@ VALUES = st.recursive(
     ),
     max_leaves=5,
 )
-SECTIONS = st.one_of(*[st.sampled_from(sorted(Plan().to_mapping()))] * 3, st.text(max_size=8))
-KEYS = st.one_of(
-    st.sampled_from(sorted({k for v in Plan().to_mapping().values() for k in v})),
-    st.text(max_size=8),
+
+
+def among(*weighted):
+    """One of several strategies by weight (`one_of` counts a branch given twice as one)."""
+    kinds = [strategy for weight, strategy in weighted for _ in range(weight)]
+    return st.integers(0, len(kinds) - 1).flatmap(kinds.__getitem__)
+
+
+SECTIONS = among((9, st.sampled_from(sorted(Plan().to_mapping()))), (1, st.text(max_size=8)))
+KEYS = among(
+    (9, st.sampled_from(sorted({k for v in Plan().to_mapping().values() for k in v}))),
+    (1, st.text(max_size=8)),
 )
 PLANS = st.dictionaries(
-    SECTIONS, st.one_of(st.dictionaries(KEYS, VALUES, max_size=4), VALUES), max_size=4
+    SECTIONS, among((9, st.dictionaries(KEYS, VALUES, max_size=4)), (1, VALUES)), max_size=4
 )
+# Plans that come far: keys in their own sections, values of the right kind, in and out of range.
+RULES = st.sampled_from(
+    [
+        *("nearest:1", "nearest:6", "nearest:19", "nearest:40", "nearest:41", "nearest:0"),
+        *("within:0", "within:1e-9", "within:0.001", "within:300", "within:99999", "within:nan"),
+        *("delaunay", "gabriel", "given", "given:nowhere.gal", "given:.", "nearest:06"),
+    ]
+)
+TEXTS = st.one_of(
+    st.sampled_from(
+        [
+            *("any", "searched", "not searched", "effort", "family", "branch", "region", "access"),
+            *("latitude", "name", "fit", "complete", "equal", "recorded", "covariates", "margins"),
+            *("none", "bh", "by", "t0", "t99", " ", "rain"),
+        ]
+    ),
+    RULES,
+    ODD,
+)
+SIZES = st.one_of(
+    st.sampled_from([0, 1, 2, 3, 19, 20, 21, 50, 99, 100, 499, 1000, 2**31, 2**63 - 1, -1, 10**19]),
+    st.integers(0, 60),
+)
+REALS = st.one_of(
+    st.sampled_from([0.0, -0.0, 1e-300, 1e-5, 0.05, 0.5, 0.999999, 1.0, 1.5, 10.0, 100.0, 1e300]),
+    st.floats(0, 12),
+    SIZES,
+)
+LISTS = {
+    "worlds": st.sampled_from(["emergence", "ancestry", "contact", "transmission", "shares"]),
+    "graphs": RULES,
+    "exponents": REALS,
+    "reaches": REALS,
+    "covariates": st.sampled_from(["rain", "flat", "holes", "effort", "nothing"]),
+    "without": st.sampled_from([*(f"t{k}" for k in range(20)), "t99"]),
+}
+
+
+def value_for(key, default):
+    """Values of a key: mostly of its kind, now and then anything."""
+    if key in LISTS:
+        kind = st.lists(LISTS[key], max_size=4)
+    elif key in ("rule", "presence"):
+        kind = RULES if key == "rule" else TEXTS
+    elif isinstance(default, bool):
+        kind = st.booleans()
+    elif isinstance(default, int):
+        kind = SIZES
+    elif isinstance(default, float):
+        kind = REALS
+    else:
+        kind = st.one_of(TEXTS, REALS) if key == "turnover" else TEXTS
+    return among((2, st.just(default)), (7, kind), (1, VALUES))
+
+
+DEEP = st.fixed_dictionaries(
+    {},
+    optional={
+        section: st.fixed_dictionaries(
+            {}, optional={key: value_for(key, default) for key, default in keys.items()}
+        )
+        for section, keys in Plan().to_mapping().items()
+    },
+)
+# One key at a time away from its default: what is wrong with a plan is then that key.
+SINGLE = st.sampled_from(
+    [(s, key, d) for s, keys in Plan().to_mapping().items() for key, d in keys.items()]
+).flatmap(lambda one: value_for(*one[1:]).map(lambda value: {one[0]: {one[1]: value}}))
 LINES = st.sampled_from(
     [
         *("[", "[[evidence]]", "[evidence]", "evidence.draws = 5", "draws = 1979-05-27T07:32:00Z"),
@@ -89,7 +172,7 @@ def damaged(raw: bytes, damage) -> bytes:
     return raw
 
 
-def answer(function, *args, kinds=(TwicetoldError,), **kw):
+def answer(function, *args, kinds=(TwicetoldError,), seconds=SECONDS, **kw):
     """Call; a wrong input must be said as one of ``kinds``, in words, and soon."""
     start, said = time.process_time(), ""
     try:
@@ -105,7 +188,7 @@ def answer(function, *args, kinds=(TwicetoldError,), **kw):
         said.encode("utf-8")
     finally:
         spent = time.process_time() - start
-    assert spent < SECONDS
+    assert spent < seconds
     took(spent)
     return said
 
@@ -132,6 +215,58 @@ def fuzz_plan(lines, damage) -> None:
 
 def fuzz_mapping(raw) -> None:
     counted("plan as values", answer(plan_from_mapping, raw, kinds=(PlanError,)))
+
+
+@pytest.fixture(scope="module")
+def tables(tmp_path_factory) -> Path:
+    """A small catalogue with covariates that vary, that do not, and that have holes."""
+    world = small_world()
+    world["traditions"][0] += ["rain", "flat", "holes"]
+    for k, row in enumerate(world["traditions"][1:]):
+        row += [str(7 * k % 11), "3", "" if k == 4 else str(k)]
+    return put(world, tmp_path_factory.mktemp("tables") / "catalogue")
+
+
+def fuzz_prepared(tables, raw) -> None:
+    """A plan that reads is laid over a catalogue, written out, and means the same read again."""
+
+    def prepared():
+        plan = plan_from_mapping(raw)
+        assert plan_from_mapping(tomllib.loads(plan.to_toml())) == plan
+        resolved = resolved_plan(tables, plan)
+        assert plan_from_mapping(tomllib.loads(resolved.to_toml())) == resolved
+        assert resolved_plan(tables, resolved) == resolved
+
+    counted("plan, deep, laid over a catalogue", answer(prepared))
+
+
+def fuzz_ranked(tables, raw) -> None:
+    """What `twicetold plan` would write, `rank` does not refuse."""
+    folder = Path(tempfile.mkdtemp())
+    try:
+        said = answer(lambda: resolved_plan(tables, plan_from_mapping(raw)))
+        if not said:
+            plan = plan_from_mapping(raw)
+            worlds = tuple(w for w in plan.evidence.worlds if w != "shares") or ("emergence",)
+            quick = {
+                "evidence__worlds": worlds,
+                "evidence__draws": min(plan.evidence.draws, 499),
+                "evidence__walks": min(plan.evidence.walks, 200),
+                "sensitivity__draws": 99,
+            }
+            plan = plan.replace(**quick)
+            out = folder / "RUN"
+            with warnings.catch_warnings():
+                warnings.simplefilter("error")
+                refused = answer(
+                    lambda: rank_run(tables, out, plan, pool=ThreadPool(1), cache=False),
+                    seconds=120.0,
+                )
+            assert refused == ""
+            assert (out / "motifs.csv").exists()
+        counted("plan, deep, through rank", said)
+    finally:
+        shutil.rmtree(folder)
 
 
 def fuzz_record(raw, damage, nested) -> None:
@@ -175,6 +310,12 @@ def test_any_plan_values(raw):
     fuzz_mapping(raw)
 
 
+@given(raw=st.one_of(DEEP, SINGLE))
+@settings(FEW, max_examples=120)
+def test_any_plan_over_a_catalogue(tables, raw):
+    fuzz_prepared(tables, raw)
+
+
 @given(raw=PLANS, damage=BYTES, nested=st.booleans())
 @settings(FEW, max_examples=200)
 def test_any_record(raw, damage, nested):
@@ -199,6 +340,20 @@ def test_very_many_plans(lines, damage):
 @settings(MANY, max_examples=10_000)
 def test_very_many_plan_values(raw):
     fuzz_mapping(raw)
+
+
+@pytest.mark.calibration
+@given(raw=st.one_of(DEEP, SINGLE))
+@settings(MANY, max_examples=10_000)
+def test_very_many_plans_over_a_catalogue(tables, raw):
+    fuzz_prepared(tables, raw)
+
+
+@pytest.mark.calibration
+@given(raw=SINGLE)
+@settings(MANY, max_examples=400)
+def test_many_plans_through_rank(tables, raw):
+    fuzz_ranked(tables, raw)
 
 
 @pytest.mark.calibration
