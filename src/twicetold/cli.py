@@ -12,6 +12,7 @@ import typer
 from typer.core import TyperGroup
 
 from twicetold.errors import CatalogueError, TwicetoldError
+from twicetold.interrupt import unmissable
 
 if TYPE_CHECKING:
     from twicetold.plan import Plan
@@ -333,7 +334,8 @@ def _pool(workers: int | None, cluster: str | None, quiet: bool) -> Any:
 
 def _run() -> None:
     try:
-        app()
+        with unmissable():
+            app()
     except _Carried as carried:
         raise carried.original from None
 
