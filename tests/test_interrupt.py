@@ -57,6 +57,19 @@ def test_a_dropped_interrupt_is_given_again_and_not_printed(monkeypatch):
     assert lost == []
 
 
+def test_what_a_dropped_interrupt_broke_is_no_fault_of_its_own(monkeypatch):
+    monkeypatch.setattr(sys, "unraisablehook", lambda what: None)
+
+    def work(first):
+        first()
+        raise RuntimeError("nothing compiled")
+
+    with pytest.raises(KeyboardInterrupt), unmissable():
+        work(dropped)
+    with pytest.raises(RuntimeError), unmissable():
+        work(lambda: None)
+
+
 def test_cleaning_up_is_not_interrupted_again():
     done = []
 

@@ -19,8 +19,8 @@ def unmissable() -> Iterator[None]:
 
     Python raises an interrupt wherever the program happens to be. In a callback of a library
     written in C (the compiler of the kernels has some) it is printed and dropped, and the program
-    goes on. So it is raised again, but never while an exception is being handled: cleaning up is
-    left alone.
+    goes on, or fails of what was left undone. So it is raised again, but never while an exception
+    is being handled (cleaning up is left alone), and in place of whatever else ends the block.
     Does nothing outside the main thread, where there are no such timers, or where interrupts are
     ignored or handled by somebody else.
     """
@@ -30,7 +30,10 @@ def unmissable() -> Iterator[None]:
         yield
         return
 
+    struck = threading.Event()
+
     def interrupted(_number: int, _frame: FrameType | None) -> None:
+        struck.set()
         signal.setitimer(signal.ITIMER_REAL, AGAIN, AGAIN)
         raise KeyboardInterrupt
 
@@ -50,6 +53,10 @@ def unmissable() -> Iterator[None]:
         signal.signal(signal.SIGINT, interrupted)
         sys.unraisablehook = quietly
         yield
+    except Exception as err:
+        if struck.is_set():
+            raise KeyboardInterrupt from err
+        raise
     finally:
         signal.setitimer(signal.ITIMER_REAL, 0.0)
         signal.signal(signal.SIGINT, signal.default_int_handler)
