@@ -11,6 +11,7 @@ import subprocess
 import sys
 import time
 from dataclasses import dataclass
+from functools import partial
 from pathlib import Path
 
 import pytest
@@ -664,6 +665,8 @@ def test_interrupt_ends_with_130_and_leaves_nothing(catalogue, tmp_path):
         stderr=subprocess.PIPE,
         text=True,
         env=os.environ | {"PYTHONUNBUFFERED": "1"},
+        # Tests that run in the background of a shell inherit that interrupts are ignored.
+        preexec_fn=partial(signal.signal, signal.SIGINT, signal.SIG_DFL),
     )
     time.sleep(4)
     assert process.poll() is None, process.stderr.read()

@@ -17,7 +17,7 @@ PLAIN = {"errors", "randomness", "workers", "folders", "display", "_sfc64", "_co
 # The plan takes the reading rules from the catalogue; the layers below inference never see it.
 PLAN = {"plan": ("evidence", "report")}
 # Nothing of the commands is imported by any layer.
-COMMANDS = {"cli", "run", "_records", "verify", "progress", "cluster", "example"}
+COMMANDS = {"cli", "run", "_records", "verify", "progress", "cluster", "example", "interrupt"}
 
 
 def imported(path: Path) -> set[str]:
