@@ -11,7 +11,6 @@ import subprocess
 import sys
 import time
 from dataclasses import dataclass
-from functools import partial
 from pathlib import Path
 
 import pytest
@@ -659,14 +658,17 @@ def test_full_screen_file_is_said_and_a_closed_pipe_is_no_fault(catalogue):
 def test_interrupt_ends_with_130_and_leaves_nothing(catalogue, tmp_path):
     before = everything(tmp_path)
     words = ["rank", catalogue, "--out", tmp_path / "out", "--draws", "20000000"]
+    # Tests that run in the background of a shell inherit that interrupts are ignored.
+    heeding = (
+        "import runpy, signal; signal.signal(signal.SIGINT, signal.default_int_handler); "
+        "runpy.run_module('twicetold.cli', run_name='__main__')"
+    )
     process = subprocess.Popen(
-        [sys.executable, "-m", "twicetold.cli", *map(str, words)],
+        [sys.executable, "-c", heeding, *map(str, words)],
         stdout=subprocess.PIPE,
         stderr=subprocess.PIPE,
         text=True,
         env=os.environ | {"PYTHONUNBUFFERED": "1"},
-        # Tests that run in the background of a shell inherit that interrupts are ignored.
-        preexec_fn=partial(signal.signal, signal.SIGINT, signal.SIG_DFL),
     )
     time.sleep(4)
     assert process.poll() is None, process.stderr.read()
